@@ -1,12 +1,59 @@
 """Option positions, and the value, greeks and payoff of a book."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass
+from datetime import date
 
 import numpy as np
 from numpy.typing import NDArray
 
-from hedgesim.market import Flags, Floats, Ints, Market
+from hedgesim.market import Flags, Floats, Ints, Market, frozen
 from hedgesim.pricing import greeks
+
+
+@dataclass(frozen=True)
+class Expiry:
+    """When a position settles; exactly one is given.
+
+    Attributes
+    ----------
+    days : trading days after the inception (calendar days under act-365)
+    years : calendar years after the inception
+    on : a date
+    """
+
+    days: float | None = None
+    years: float | None = None
+    on: date | None = None
+
+
+@dataclass(frozen=True)
+class Position:
+    """A position as the experiment states it, before an inception fixes spot, vol and looks.
+
+    Attributes
+    ----------
+    underlying : index of the underlying
+    is_call : call or put
+    strike : price; or a fraction of the spot at inception when `strike_of_spot`
+    amount : signed units of the underlying; or signed notional in currency when `is_notional`
+    expiry : see `Expiry`
+    mark_vol, hedge_vol : own vols, None to take those of the underlying
+    premium : price per unit of the underlying, None to take the model value at mark
+    physical : settled by delivery
+    """
+
+    underlying: int
+    is_call: bool
+    strike: float
+    strike_of_spot: bool
+    amount: float
+    is_notional: bool
+    expiry: Expiry
+    mark_vol: float | None = None
+    hedge_vol: float | None = None
+    premium: float | None = None
+    physical: bool = False
 
 
 @dataclass(frozen=True)
@@ -45,6 +92,49 @@ class Book:
     def size(self) -> int:
         """Number of positions."""
         return len(self.units)
+
+
+def settle_terms(
+    positions: Sequence[Position],
+    *,
+    spot: Floats,
+    mark_vol: Floats,
+    hedge_vol: Floats,
+    expiry_look: Ints,
+    expiry_t: Floats,
+    expiry_s: Floats,
+    initial_units: Floats,
+) -> Book:
+    """Fix `positions` at one inception.
+
+    Parameters
+    ----------
+    spot, initial_units : by underlying
+    mark_vol : by underlying, at the inception; a position's own mark vol goes before it
+    hedge_vol : by underlying: the vol to hedge at, nan to hedge each position at its mark vol; a position's own hedge
+        vol goes before it
+    expiry_look, expiry_t, expiry_s : by position
+    """
+    at = np.array([p.underlying for p in positions], dtype=np.int64)
+    strike = np.array([p.strike * (spot[p.underlying] if p.strike_of_spot else 1.0) for p in positions])
+    units = np.array([p.amount / (spot[p.underlying] if p.is_notional else 1.0) for p in positions])
+    mark = np.array([mark_vol[p.underlying] if p.mark_vol is None else p.mark_vol for p in positions])
+    usual = np.where(np.isnan(hedge_vol[at]), mark, hedge_vol[at])
+    hedge = np.array([v if p.hedge_vol is None else p.hedge_vol for p, v in zip(positions, usual, strict=True)])
+    return Book(
+        underlying=frozen(at, np.int64),
+        is_call=frozen([p.is_call for p in positions], bool),
+        strike=frozen(strike),
+        units=frozen(units),
+        expiry_look=frozen(expiry_look, np.int64),
+        expiry_t=frozen(expiry_t),
+        expiry_s=frozen(expiry_s),
+        mark_vol=frozen(mark),
+        hedge_vol=frozen(hedge),
+        premium=frozen([np.nan if p.premium is None else p.premium for p in positions]),
+        physical=frozen([p.physical for p in positions], bool),
+        initial_units=frozen(initial_units),
+    )
 
 
 @dataclass(frozen=True)

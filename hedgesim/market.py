@@ -1,7 +1,7 @@
 """Market data and clocks: rates, yields, underlyings, and the watch grid on which prices are seen."""
 
 from dataclasses import dataclass
-from typing import Literal
+from typing import Any, Literal
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,7 +15,7 @@ DAYS_PER_YEAR: dict[DayCount, int] = {"business-252": 252, "act-365": 365}
 DAYS_PER_WEEK: dict[DayCount, int] = {"business-252": 5, "act-365": 7}
 
 
-def frozen(values: object, dtype: type = np.float64) -> NDArray[np.generic]:
+def frozen(values: Any, dtype: type = np.float64) -> NDArray[Any]:
     """A read-only copy of `values` as an array of `dtype`."""
     array = np.array(values, dtype=dtype)
     array.setflags(write=False)
