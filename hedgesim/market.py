@@ -17,7 +17,7 @@ DAYS_PER_WEEK: dict[DayCount, int] = {"business-252": 5, "act-365": 7}
 
 def frozen(values: Any, dtype: type = np.float64) -> NDArray[Any]:
     """A read-only copy of `values` as an array of `dtype`."""
-    array = np.array(values, dtype=dtype)
+    array: NDArray[Any] = np.array(values, dtype=dtype)
     array.setflags(write=False)
     return array
 

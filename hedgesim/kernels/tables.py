@@ -1,0 +1,108 @@
+"""Piecewise-quintic tables in log price of sums of normal distribution functions, and their evaluation.
+
+Everything a European book needs at a look is a sum F(y) = sum_j a_j N((y - k_j) / w_j + c w_j): the hedge slope with
+c = 1/2, the strike leg of the value with c = -1/2. On a cell the quintic that matches F, F' and F'' at both ends is
+kept by its six coefficients in u = (y - node) / cell width.
+"""
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hedgesim.kernels.jit import device, kernel
+from hedgesim.kernels.vector_math import fma, normal_cdf, normal_pdf
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+
+class Table(NamedTuple):
+    """Tables of one function family, by underlying and look.
+
+    Attributes
+    ----------
+    start : (underlying, look) first row of `coefficients`
+    cells : (underlying, look) number of cells, 0 where the function is zero
+    low : (underlying, look) log price of the first node
+    per_cell : (underlying, look) cells per unit of log price
+    coefficients : (cell, 6)
+    """
+
+    start: Ints
+    cells: Ints
+    low: Floats
+    per_cell: Floats
+    coefficients: Floats
+
+
+@kernel
+def fill_cells(
+    low: float,
+    width: float,
+    amount: Floats,
+    log_strike: Floats,
+    root: Floats,
+    shift: float,
+    constant: float,
+    out: Floats,
+) -> None:
+    """Coefficients of F(y) = constant + sum_j amount_j N((y - log_strike_j) / root_j + shift root_j).
+
+    `out` is (cells, 6); the nodes are low + i width; `root` = vol sqrt(variance years to expiry), positive.
+    """
+    cells = out.shape[0]
+    value = np.full(cells + 1, constant)
+    slope = np.zeros(cells + 1)
+    bend = np.zeros(cells + 1)
+    for j in range(len(amount)):
+        inv = 1.0 / root[j]
+        first = (low - log_strike[j]) * inv + shift * root[j]
+        step = width * inv
+        a = amount[j]
+        for i in range(cells + 1):
+            d = first + i * step
+            density = a * inv * normal_pdf(min(max(d, -37.0), 37.0))
+            value[i] += a * normal_cdf(d)
+            slope[i] += density
+            bend[i] -= density * d * inv
+    for i in range(cells):
+        rise = value[i + 1] - value[i]
+        s0, s1 = width * slope[i], width * slope[i + 1]
+        b0, b1 = width * width * bend[i], width * width * bend[i + 1]
+        out[i, 0] = value[i]
+        out[i, 1] = s0
+        out[i, 2] = 0.5 * b0
+        out[i, 3] = 10.0 * rise - 6.0 * s0 - 4.0 * s1 - 1.5 * b0 + 0.5 * b1
+        out[i, 4] = -15.0 * rise + 8.0 * s0 + 7.0 * s1 + 1.5 * b0 - b1
+        out[i, 5] = 6.0 * rise - 3.0 * (s0 + s1) - 0.5 * (b0 - b1)
+
+
+@device
+def lookup(table: Table, underlying: int, look: int, log_price: Floats, value: Floats, slope: Floats) -> None:
+    """F and dF/dy at each log price; beyond the ends of the table the value at the end, with its slope there."""
+    cells = table.cells[underlying, look]
+    if cells == 0:
+        for p in range(len(log_price)):
+            value[p] = 0.0
+            slope[p] = 0.0
+        return
+    first = table.start[underlying, look]
+    part = table.coefficients[first : first + cells]
+    low, per_cell = table.low[underlying, look], table.per_cell[underlying, look]
+    top = np.float64(cells) - 1e-9
+    for p in range(len(log_price)):
+        x = min(max((log_price[p] - low) * per_cell, 0.0), top)
+        cell = np.int32(x)
+        u = x - cell
+        c5 = part[cell, 5]
+        f = fma(c5, u, part[cell, 4])
+        d = fma(c5, u, f)
+        f = fma(f, u, part[cell, 3])
+        d = fma(d, u, f)
+        f = fma(f, u, part[cell, 2])
+        d = fma(d, u, f)
+        f = fma(f, u, part[cell, 1])
+        d = fma(d, u, f)
+        value[p] = fma(f, u, part[cell, 0])
+        slope[p] = d * per_cell
