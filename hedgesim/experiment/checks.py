@@ -11,30 +11,39 @@ from hedgesim.experiment.fields import Fault, nearest, unknown_name
 from hedgesim.experiment.values import as_percent
 
 if TYPE_CHECKING:
-    from hedgesim.experiment import schema
+    from hedgesim.experiment import policy, schema
 
 
 @dataclass(frozen=True)
 class Parts:
-    """The sections of an experiment that are valid by themselves; None where one is not."""
+    """An experiment as read, and the sections of it that are valid by themselves; None where one is not."""
 
+    data: Mapping[str, Any]
     names: tuple[str, ...]
-    source: Any
-    date_given: bool
     date: dt.date | None
     underlyings: "Mapping[str, schema.Underlying | None]"
     market: "schema.Market | None"
     book: "tuple[schema.Position | None, ...]"
     paths: "schema.GbmPaths | schema.PricePaths | None"
-    hedge: "schema.Hedge | None"
-    schedules: "tuple[schema.Schedule | None, ...]"
-    costs: "schema.Costs | None"
+    hedge: "policy.Hedge | None"
+    schedules: "tuple[policy.Schedule | None, ...]"
+
+    @property
+    def source(self) -> object:
+        """Source of the paths as written."""
+        return get(self.data, "paths", "source")
+
+
+def get(data: Any, *keys: str) -> Any:
+    """Look up a value in nested mappings or sections; None when any level is missing or something else."""
+    for key in keys:
+        data = data.get(key) if isinstance(data, Mapping) else getattr(data, key, None)
+    return data
 
 
 def names_in(data: Mapping[str, Any]) -> tuple[str, ...]:
     """Name the underlyings of an experiment that may have faults."""
-    market = data.get("market")
-    underlyings = market.get("underlyings") if isinstance(market, Mapping) else None
+    underlyings = get(data, "market", "underlyings")
     return tuple(underlyings) if isinstance(underlyings, Mapping) else ()
 
 
@@ -49,31 +58,29 @@ def across(parts: Parts) -> Iterator[Fault]:
 
 
 def _names(parts: Parts) -> Iterator[Fault]:
+    rows = get(parts.data, "book")
     used: set[str | None] = set()
-    for i, position in enumerate(parts.book):
-        name = position.underlying if position else None
-        if position and name is None and parts.names:
+    for i, row in enumerate(rows if isinstance(rows, list | tuple) else ()):
+        name = get(row, "underlying")
+        if name is None and parts.names:
             yield Fault(("book", i, "underlying"), "missing", f"write one of {', '.join(parts.names)}")
-        elif name is not None and name not in parts.names:
+        elif isinstance(name, str) and name not in parts.names:
             yield Fault(("book", i, "underlying"), *unknown_name(name, parts.names))
             name = nearest(name, parts.names)
-        used.add(name)
-    if None not in used:
+        used.add(name if isinstance(name, str) else None)
+    if used and None not in used:
         for name in parts.names:
             if name not in used:
-                path = ("market", "underlyings", name)
-                yield Fault(path, "no position is on it", "delete it, or add a position", on_key=True)
-    if parts.hedge is not None:
-        yield from _named(("hedge", "initial"), parts.hedge.initial, parts.names, every=False)
-    if parts.costs is not None:
-        yield from _named(("costs", "by_underlying"), parts.costs.by_underlying, parts.names, every=False)
-    if parts.paths is None:
-        return
-    if parts.paths.source == "gbm":
-        yield from _named(("paths", "realised_vol"), parts.paths.realised_vol, parts.names, every=True)
-        yield from _named(("paths", "drift"), parts.paths.drift, parts.names, every=True)
-    else:
-        yield from _named(("paths", "series"), parts.paths.series, parts.names, every=True)
+                unused = ("market", "underlyings", name)
+                yield Fault(unused, "no position is on it", "delete it, or add a position", on_key=True)
+    for path, every in (
+        (("paths", "realised_vol"), True),
+        (("paths", "drift"), True),
+        (("paths", "series"), True),
+        (("hedge", "initial"), False),
+        (("costs", "by_underlying"), False),
+    ):
+        yield from _named(path, get(parts.data, *path), parts.names, every=every)
 
 
 def _named(path: tuple[str, ...], given: object, names: tuple[str, ...], *, every: bool) -> Iterator[Fault]:
@@ -206,7 +213,7 @@ def _dates(parts: Parts) -> Iterator[Fault]:
     for path, term in terms:
         if not isinstance(term, dt.date):
             continue
-        if not parts.date_given:
+        if get(parts.data, "market", "date") is None:
             yield Fault(
                 path, f"the date {term} needs the date of the inception", "give market.date, or write a duration"
             )

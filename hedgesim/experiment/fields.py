@@ -22,6 +22,12 @@ from hedgesim.experiment.values import BadValueError, shown
 
 Path = tuple[str | int, ...]
 _KIND = "experiment_fault"
+DURATION_JSON: dict[str, Any] = {
+    "anyOf": [
+        {"type": "number", "exclusiveMinimum": 0},
+        {"type": "string", "pattern": r"^[0-9.]+([eE][-+]?[0-9]+)?\s*((min|h|d|w|y|looks?)|/\s*[0-9.]+)$"},
+    ]
+}
 _PERCENT_JSON = {"type": "string", "pattern": r"^[-+]?(\.[0-9]+|[0-9][0-9_]*(\.[0-9]*)?)([eE][-+]?[0-9]+)?\s*(%|bp)$"}
 
 
@@ -83,7 +89,7 @@ def _in_words(detail: Any, path: Path, section: type[BaseModel] | None) -> tuple
     if kind in ("list_type", "tuple_type"):
         return f"{shown(value)} where a list is expected", "write one item a line, each after a dash", False
     if kind == "too_short":
-        return "an empty list", "give at least one item", False
+        return "nothing in it", described(section, key), False
     return f"{shown(value)}: {detail['msg'].lower()}", described(section, key), False
 
 
@@ -237,7 +243,7 @@ def number(
     def words() -> str:
         parts = []
         if low is not None:
-            parts.append(f"{'above' if above is not None else 'at least'} {values.shortest(low)}")
+            parts.append(f"{'above' if above is not None else 'of at least'} {values.shortest(low)}")
         if high is not None:
             parts.append(f"{'below' if below is not None else 'at most'} {values.shortest(high)}")
         return " and ".join(parts)
@@ -267,7 +273,8 @@ def number(
             raise BadValueError(f"{shown(value)} looks like a percentage", f"write {shown(value)}{unit}")
         as_written = value if isinstance(value, str) else shown(value)
         example = f", such as {such_as}" if percent else ""
-        raise BadValueError(f"{as_written} is out of range", f"write a number {words()}{example}")
+        kind = "whole number" if whole else "number"
+        raise BadValueError(f"{as_written} is out of range", f"write a {kind} {words()}{example}")
 
     bounds = {"exclusiveMinimum": above, "minimum": least, "exclusiveMaximum": below, "maximum": most}
     json: dict[str, Any] = {"type": "integer" if whole else "number"}
@@ -315,6 +322,13 @@ def text(*, most: int = 200, pattern: str = "", advice: str = "") -> Read:
         return value
 
     return Read(read, {"type": "string", "minLength": 1, "maxLength": most} | ({"pattern": pattern} if pattern else {}))
+
+
+NAME = text(
+    most=64,
+    pattern=r"(?!all$)[^\W_][\w.&/-]*",
+    advice="write letters, digits and . & / - _, beginning with a letter or digit; 'all' is taken",
+)
 
 
 @dataclass(frozen=True, eq=False)

@@ -11,8 +11,8 @@ from pydantic import ValidationError
 
 from hedgesim.errors import ExperimentError, Problem
 from hedgesim.experiment.bookfile import BookFile, read_book
-from hedgesim.experiment.fields import Fault, described, faults_of, field_names
-from hedgesim.experiment.nodes import KeyPath, Place, Tree, compose
+from hedgesim.experiment.fields import Fault, Section, described, faults_of, field_names
+from hedgesim.experiment.nodes import KeyPath, Place, Tree, compose, write
 from hedgesim.experiment.schema import Experiment, Position
 from hedgesim.experiment.values import shown
 
@@ -54,8 +54,7 @@ class Source:
         for length in range(len(path), -1, -1):
             place = (self.keys if on_key else self.places).get(path[:length]) or self.places.get(path[:length])
             if place is not None:
-                words = path[place.hidden :] if length > place.hidden or len(path) > place.hidden else path
-                return Problem(place.file, place.line, place.column, dotted(words), message, advice)
+                return Problem(place.file, place.line, place.column, dotted(path[place.hidden :]), message, advice)
         return Problem(self.file, None, None, dotted(path), message, advice)
 
 
@@ -113,6 +112,45 @@ def load_experiment(path: str | os.PathLike[str], overrides: Sequence[str] = ())
     return _Reading(Path(path), overrides).finish()
 
 
+def dump_experiment(experiment: Experiment, *, price_file: str | None = None) -> str:
+    """Write an experiment as YAML that loads to an equal one: defaults written out, the book inline.
+
+    Parameters
+    ----------
+    experiment : Experiment
+        The experiment.
+    price_file : str, optional
+        Name for the price file in place of the one in the experiment, for a text that will stand in another folder.
+
+    Returns
+    -------
+    str
+        The YAML text.
+    """
+    data = _plain(experiment)
+    if price_file is not None:
+        data["paths"]["file"] = price_file
+    return write(data)
+
+
+def _plain(value: Any) -> Any:
+    """Turn models into mappings, and durations, strikes and dates into text; options not given are left out."""
+    match value:
+        case Section():
+            fields = {info.alias or name: getattr(value, name) for name, info in type(value).model_fields.items()}
+            if fields.get("notional") is not None:
+                del fields["multiplier"]
+            kept = {key: one for key, one in fields.items() if one is not None or key in ("horizon", "limit")}
+            return {key: _plain(one) for key, one in kept.items()}
+        case dict():
+            return {key: _plain(one) for key, one in value.items()}
+        case list() | tuple():
+            return [_plain(one) for one in value]
+        case None | int() | float() | str():
+            return value
+    return str(value)
+
+
 class _Reading:
     """The state of one reading: data, places and problems so far."""
 
@@ -158,10 +196,11 @@ class _Reading:
             raise ExperimentError([problem]) from None
 
     def _take(self, tree: Tree, at: KeyPath = ()) -> None:
-        for path, message, advice, place in tree.faults:
+        for path, message, advice, place, unread in tree.faults:
             words = dotted((*at, *path)) if path is not None else ""
             self.problems.append(Problem(place.file, place.line, place.column, words, message, advice))
-            self.spoilt.add((*at, *(path or ())))
+            if unread:
+                self.spoilt.add((*at, *(path or ())))
 
     def _override(self, override: str) -> None:
         target, equals, written = override.partition("=")

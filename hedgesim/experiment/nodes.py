@@ -5,7 +5,7 @@ from typing import Any, NamedTuple
 
 import yaml
 
-from hedgesim.experiment.values import BadValueError, parse_scalar
+from hedgesim.experiment.values import BadValueError, parse_scalar, shortest
 
 KeyPath = tuple[str | int, ...]
 MOST_DEPTH = 20
@@ -23,12 +23,13 @@ class Place:
 
 
 class NodeFault(NamedTuple):
-    """Something wrong with the text at a path; no path when the text as a whole cannot be read."""
+    """Something wrong with the text at a path (None: the text as a whole); `unread` when no value was taken there."""
 
     path: KeyPath | None
     message: str
     advice: str
     place: Place
+    unread: bool
 
 
 @dataclass
@@ -84,8 +85,11 @@ class _Composer:
             message = f"the character U+{ord(text[error.position]):04X} is not accepted"
             self._fault(None, message, "remove it", place)
 
-    def _fault(self, path: KeyPath | None, message: str, advice: str, place: Place | None) -> None:
-        self.tree.faults.append(NodeFault(path, message, advice, self.here or place or Place(self.file, 1, 1)))
+    def _fault(
+        self, path: KeyPath | None, message: str, advice: str, place: Place | None, *, unread: bool = False
+    ) -> None:
+        where = self.here or place or Place(self.file, 1, 1)
+        self.tree.faults.append(NodeFault(path, message, advice, where, unread or path is None))
 
     def _place(self, event: Any) -> Place:
         return self.here or Place(self.file, event.start_mark.line + 1, event.start_mark.column + 1)
@@ -113,13 +117,13 @@ class _Composer:
         below = key is not None and place.line != key.line and not isinstance(event, yaml.ScalarEvent)
         self.tree.places[path] = key if key is not None and below else place
         if isinstance(event, yaml.AliasEvent):
-            self._fault(path, f"the alias *{event.anchor} is not accepted", "write the value out", place)
+            self._fault(path, f"the alias *{event.anchor} is not accepted", "write the value out", place, unread=True)
             return None
         if event.anchor is not None:
             self._fault(path, f"the anchor &{event.anchor} is not accepted", "write the value without it", place)
         if event.tag is not None:
             tag = event.tag.replace("tag:yaml.org,2002:", "!!")
-            self._fault(path, f"the tag {tag} is not accepted", "write the value without it", place)
+            self._fault(path, f"the tag {tag} is not accepted", "write the value without it", place, unread=True)
         if isinstance(event, yaml.ScalarEvent):
             return self._scalar(event, path, place)
         return self._mapping(path) if isinstance(event, yaml.MappingStartEvent) else self._sequence(path)
@@ -130,7 +134,7 @@ class _Composer:
         try:
             return parse_scalar(event.value)
         except BadValueError as bad:
-            self._fault(path, bad.message, bad.advice, place)
+            self._fault(path, bad.message, bad.advice, place, unread=True)
             return None
 
     def _sequence(self, path: KeyPath) -> list[Any]:
@@ -181,3 +185,29 @@ def _in_words(error: yaml.MarkedYAMLError) -> tuple[str, str]:
         return "a second ': ' on the line", "put the text in quotes, or write one key a line"
     context = f" {error.context}" if error.context else ""
     return f"{problem}{context}", "check indentation, brackets, quotes and the colon after each key"
+
+
+class _Writer(yaml.SafeDumper):
+    # Plain scalars are tagged as text and no resolver looks at them, so PyYAML neither tags nor quotes them by its
+    # own (YAML 1.1) rules; _written decides on quotes by the rules that `compose` reads with.
+    yaml_implicit_resolvers = {}  # noqa: RUF012
+
+    def ignore_aliases(self, data: Any) -> bool:
+        return True
+
+
+def _written(writer: _Writer, value: Any) -> yaml.ScalarNode:
+    if isinstance(value, str):
+        quoted = value != value.strip() or not isinstance(parse_scalar(value), str) or value == "<<"
+        return writer.represent_scalar("tag:yaml.org,2002:str", value, style='"' if quoted else None)
+    text = "null" if value is None else shortest(value) if isinstance(value, float) else str(value)
+    return writer.represent_scalar("tag:yaml.org,2002:str", text)
+
+
+for _kind in (str, int, float, type(None)):
+    _Writer.add_representer(_kind, _written)
+
+
+def write(data: Any) -> str:
+    """Write mappings, lists, text, numbers and None as YAML that `compose` reads back to equal values."""
+    return yaml.dump(data, Dumper=_Writer, sort_keys=False, allow_unicode=True, width=120, default_flow_style=None)

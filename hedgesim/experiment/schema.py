@@ -2,12 +2,14 @@
 
 import datetime as dt
 from collections.abc import Callable, Iterable, Mapping
-from typing import Annotated, Any, Literal, Self, TypeVar, cast
+from typing import Annotated, Any, Literal, Self, TypeVar
 
-from pydantic import BeforeValidator, Field, ValidationError, WrapValidator, model_validator
+from pydantic import BeforeValidator, Field, ValidationError, WrapValidator
 
 from hedgesim.experiment import checks
 from hedgesim.experiment.fields import (
+    DURATION_JSON,
+    NAME,
     Fault,
     OrJson,
     Read,
@@ -19,6 +21,18 @@ from hedgesim.experiment.fields import (
     text,
     unknown_key,
     unknown_value,
+)
+from hedgesim.experiment.policy import (
+    At,
+    Costs,
+    CostTerms,
+    Every,
+    Hedge,
+    Report,
+    Schedule,
+    Study,
+    Trades,
+    read_schedule,
 )
 from hedgesim.experiment.values import (
     BadValueError,
@@ -32,14 +46,32 @@ from hedgesim.experiment.values import (
     shown,
 )
 
-_DURATION_JSON: dict[str, Any] = {
-    "anyOf": [
-        {"type": "number", "exclusiveMinimum": 0},
-        {"type": "string", "pattern": r"^[0-9.]+([eE][-+]?[0-9]+)?\s*((min|h|d|w|y|looks?)|/\s*[0-9.]+)$"},
-    ]
-}
+__all__ = [
+    "At",
+    "CostTerms",
+    "Costs",
+    "Every",
+    "Experiment",
+    "GbmPaths",
+    "Hedge",
+    "Inceptions",
+    "Market",
+    "Position",
+    "PricePaths",
+    "PriceSeries",
+    "Report",
+    "Schedule",
+    "Study",
+    "TimeColumn",
+    "Trades",
+    "Underlying",
+    "VolColumn",
+    "by_underlying",
+    "json_schema",
+]
+
 _DATE_JSON: dict[str, Any] = {"type": "string", "format": "date"}
-_TERM_JSON: dict[str, Any] = {"anyOf": [*_DURATION_JSON["anyOf"], _DATE_JSON]}
+_TERM_JSON: dict[str, Any] = {"anyOf": [*DURATION_JSON["anyOf"], _DATE_JSON]}
 _STRIKE_JSON: dict[str, Any] = {
     "anyOf": [{"type": "number", "exclusiveMinimum": 0}, {"type": "string", "pattern": r"^[0-9.]+\s*%$"}]
 }
@@ -47,6 +79,9 @@ _COLUMN_JSON: dict[str, Any] = {"type": "string", "minLength": 1}
 
 
 def _as_tuple(value: Any) -> Any:
+    # min_length of the field counts the valid items only, so emptiness is told here.
+    if value == [] or value == ():
+        raise_faults("list", [Fault((), "an empty list", "give at least one item")])
     return tuple(value) if isinstance(value, list) else value
 
 
@@ -54,19 +89,12 @@ def _as_column(value: Any) -> Any:
     return {"column": value} if isinstance(value, str) else value
 
 
-_Name = Annotated[
-    str,
-    text(
-        most=64,
-        pattern=r"(?!all$)[^\W_][\w.&/-]*",
-        advice="write letters, digits and . & / - _, beginning with a letter or digit; 'all' is taken",
-    ),
-]
+_Name = Annotated[str, NAME]
 _Text = Annotated[str, text()]
 _Vol = Annotated[float, number(above=0, most=5, percent=True)]
 _Rate = Annotated[float, number(least=-1, most=1, percent=True, such_as="3%")]
 _Term = Annotated[Duration | dt.date, Read(parse_term, _TERM_JSON)]
-_Every = Annotated[Duration, Read(lambda value: parse_duration(value, looks=True), _DURATION_JSON)]
+_Every = Annotated[Duration, Read(lambda value: parse_duration(value, looks=True), DURATION_JSON)]
 _vols = per_underlying(number(above=0, most=5, percent=True))
 _drifts = per_underlying(number(least=-1, most=1, percent=True, such_as="4%"))
 
@@ -111,7 +139,7 @@ class Market(Section):
         default="business-252", description="how days become years: business-252 (d is a trading day) or act-365"
     )
     rate: _Rate = Field(default=0.0, description="interest rate of the currency, a year, continuously compounded")
-    session: Annotated[Duration, Read(parse_duration, _DURATION_JSON)] = Field(
+    session: Annotated[Duration, Read(parse_duration, DURATION_JSON)] = Field(
         default=Duration(8.0, "h"), description="length of a trading day, from open to close"
     )
     underlyings: dict[_Name, Underlying] = Field(
@@ -222,7 +250,7 @@ class TimeColumn(Section):
     """The column that says when a price was seen."""
 
     column: _Text = Field(description="name of the column with the times")
-    unit: Annotated[float, Read(parse_years, _DURATION_JSON)] | None = Field(
+    unit: Annotated[float, Read(parse_years, DURATION_JSON)] | None = Field(
         default=None,
         description="years that one unit of a numeric column is worth, such as 1/52; none: dates or timestamps",
     )
@@ -301,200 +329,6 @@ def _read_paths(value: Any) -> GbmPaths | PricePaths:
     return _SOURCES[source].model_validate(value)
 
 
-_VOL = number(above=0, most=5, percent=True)
-
-
-def _read_hedge_vol(value: Any) -> float | str:
-    if value in ("mark", "realised"):
-        return str(value)
-    if isinstance(value, str) and not value[:1].isdigit():
-        message, advice = unknown_value(value, ["mark", "realised"])
-        raise BadValueError(
-            message, advice if advice.startswith("did") else "write mark, realised or a vol such as 20%"
-        )
-    return cast(float, _VOL.read(value))
-
-
-class Hedge(Section):
-    """What the delta is computed at and what is held at the start."""
-
-    vol: Annotated[
-        float | Literal["mark", "realised"],
-        Read(_read_hedge_vol, {"anyOf": [{"enum": ["mark", "realised"]}, *_VOL.json["anyOf"]]}),
-    ] = Field(
-        default="mark", description="mark, realised or a vol a year, for every option without a hedge_vol of its own"
-    )
-    initial: Annotated[float | dict[str, float], per_underlying(number())] = Field(
-        default=0.0, description="units of the underlying already held; one value or a value for each underlying"
-    )
-    remark: Literal["inception", "daily"] = Field(
-        default="inception", description="when the hedge vol is taken from the mark_vol series: at inception, or daily"
-    )
-
-
-_LABEL = text(most=60)
-
-
-class _Named(Section):
-    name: Annotated[str, _LABEL] = Field(
-        default="", description="name in the report; default the rule in words, as every 1h"
-    )
-
-    def default_name(self) -> str:
-        """Say the rule in words."""
-        raise NotImplementedError
-
-    @model_validator(mode="after")
-    def _give_name(self) -> Self:
-        if not self.name:
-            # A frozen model only refuses assignment from outside; here it is still being built.
-            object.__setattr__(self, "name", self.default_name())
-        return self
-
-
-class Every(_Named):
-    """Trade at equal intervals counted from the inception, or never again after the entry."""
-
-    every: Annotated[
-        Duration | Literal["never"],
-        Read(
-            lambda value: value if value == "never" else parse_duration(value, looks=True),
-            {"anyOf": [{"const": "never"}, *_DURATION_JSON["anyOf"]]},
-        ),
-    ] = Field(description="a duration, a number of looks such as 4 looks, or never")
-
-    def default_name(self) -> str:
-        """Say the rule in words."""
-        return "entry only" if self.every == "never" else f"every {self.every}"
-
-
-def _read_moments(value: Any) -> tuple[str, ...]:
-    if not isinstance(value, list | tuple) or not value:
-        raise BadValueError(f"{shown(value)} is not a list of moments", "write [open], [close] or [open, close]")
-    for moment in value:
-        if moment not in ("open", "close"):
-            raise BadValueError(*unknown_value(moment, ["open", "close"]))
-    if len(set(value)) < len(value):
-        raise BadValueError("a moment is given twice", "write [open], [close] or [open, close]")
-    return tuple(moment for moment in ("open", "close") if moment in value)
-
-
-class At(_Named):
-    """Trade at the open, at the close, or at both, of each trading day."""
-
-    at: Annotated[
-        tuple[Literal["open", "close"], ...],
-        Read(
-            _read_moments,
-            {"type": "array", "minItems": 1, "uniqueItems": True, "items": {"enum": ["open", "close"]}},
-        ),
-    ] = Field(description="[open], [close] or [open, close] of each trading day")
-
-    def default_name(self) -> str:
-        """Say the rule in words."""
-        return f"at {' and '.join(self.at)}"
-
-
-class Trades(_Named):
-    """Trade a number of times, equally spaced over the life."""
-
-    trades: Annotated[int, number(least=1, most=10**7, whole=True)] = Field(
-        description="number of trades, equally spaced over the life"
-    )
-
-    def default_name(self) -> str:
-        """Say the rule in words."""
-        return f"{self.trades} trade{'' if self.trades == 1 else 's'}"
-
-
-Schedule = Every | At | Trades
-_RULES: dict[str, type[Every] | type[At] | type[Trades]] = {"every": Every, "at": At, "trades": Trades}
-_RULE_ADVICE = "write {every: 1h}, {at: [open, close]} or {trades: 12}"
-
-
-def _read_schedule(value: Any) -> Schedule:
-    if isinstance(value, Every | At | Trades):
-        return value
-    if not isinstance(value, Mapping):
-        raise_faults("schedule", [Fault((), f"{shown(value)} is not a schedule", _RULE_ADVICE)])
-    rules = [key for key in value if key in _RULES]
-    if len(rules) > 1:
-        raise_faults("schedule", [Fault((), f"has {' and '.join(rules)}", "keep one: make a schedule of each")])
-    if rules:
-        return _RULES[rules[0]].model_validate(value)
-    unknown = [key for key in value if key != "name"]
-    if not unknown:
-        raise_faults("schedule", [Fault((), "has no rule", _RULE_ADVICE)])
-    raise_faults("schedule", [Fault((key,), *unknown_key(key, [*_RULES, "name"]), on_key=True) for key in unknown])
-
-
-class CostTerms(Section):
-    """What a trade costs; all in the market's currency and at or above zero."""
-
-    half_spread: Annotated[float, number(least=0, below=1, percent=True, such_as="2bp")] = Field(
-        default=0.0, description="half the bid-offer spread, a fraction of the traded notional"
-    )
-    per_unit: Annotated[float, number(least=0)] = Field(
-        default=0.0, description="currency per unit of the underlying traded"
-    )
-    per_trade: Annotated[float, number(least=0)] = Field(default=0.0, description="currency per ticket")
-
-
-class Costs(CostTerms):
-    """Costs of trading, with other terms for single underlyings."""
-
-    by_underlying: dict[_Name, CostTerms] = Field(
-        default_factory=dict, description="other terms for single underlyings; a term left out is as for all"
-    )
-
-    @classmethod
-    def prepared(cls, data: Mapping[str, Any]) -> Mapping[str, Any]:
-        """Give each underlying the general terms that it does not replace."""
-        others = data.get("by_underlying")
-        if not isinstance(others, Mapping):
-            return data
-        general = {key: data[key] for key in CostTerms.model_fields if data.get(key) is not None}
-        try:
-            CostTerms.model_validate(general)
-        except ValidationError:
-            return data  # the general terms report their own faults, once
-        filled = {name: general | dict(own) if isinstance(own, Mapping) else own for name, own in others.items()}
-        return {**data, "by_underlying": filled}
-
-    def of(self, name: str) -> CostTerms:
-        """Give the terms that hold for an underlying."""
-        general = CostTerms(half_spread=self.half_spread, per_unit=self.per_unit, per_trade=self.per_trade)
-        return self.by_underlying.get(name, general)
-
-
-class Study(Section):
-    """How schedules are compared."""
-
-    mean: Literal["costs", "total"] = Field(
-        default="costs", description="what mean is weighed against risk: costs or total"
-    )
-    risk: Literal["std", "variance", "es975"] = Field(
-        default="std", description="std, variance, or es975: mean of the worst 2.5% as a positive loss"
-    )
-    cost_of_risk: Annotated[float, number(least=0)] = Field(
-        default=0.5, description="currency of mean given up for one unit of risk"
-    )
-    limit: Annotated[float, number(above=0)] | None = Field(
-        default=None, description="largest risk allowed, or null for none"
-    )
-    confidence: Annotated[float, number(above=0.5, below=1, percent=True, such_as="95%")] = Field(
-        default=0.95, description="confidence of intervals and of the choice"
-    )
-
-
-class Report(Section):
-    """How the report is written."""
-
-    currency: Annotated[str, text(pattern="[A-Z]{3}", advice="write three capital letters, such as EUR")] = Field(
-        default="EUR", description="three-letter code of the currency that amounts are in"
-    )
-
-
 class Experiment(Section):
     """One experiment: market, book, paths, hedge, schedules, costs, study and report."""
 
@@ -504,15 +338,15 @@ class Experiment(Section):
         tuple[Position, ...],
         BeforeValidator(_as_tuple),
         OrJson({"type": "string", "minLength": 1, "description": "CSV file with the same columns"}),
-    ] = Field(min_length=1, description="option positions, or a CSV file with the same columns")
+    ] = Field(description="option positions, or a CSV file with the same columns")
     paths: Annotated[GbmPaths | PricePaths, WrapValidator(lambda value, handler: _read_paths(value))] = Field(
         description="where prices come from: source gbm or prices"
     )
     hedge: Hedge = Field(default_factory=Hedge, description="the delta and the initial hedge")
     schedules: Annotated[
-        tuple[Annotated[Schedule, WrapValidator(lambda value, handler: _read_schedule(value))], ...],
+        tuple[Annotated[Schedule, WrapValidator(lambda value, handler: read_schedule(value))], ...],
         BeforeValidator(_as_tuple),
-    ] = Field(min_length=1, description="rules that say when the hedge is rebalanced")
+    ] = Field(description="rules that say when the hedge is rebalanced")
     costs: Costs = Field(default_factory=Costs, description="what a trade costs")
     study: Study = Field(default_factory=Study, description="how schedules are compared")
     report: Report = Field(default_factory=Report, description="how the report is written")
@@ -556,39 +390,23 @@ def _valid(read: Callable[[Any], _T], value: Any) -> _T | None:
 
 def _parts(data: Mapping[str, Any], whole: Experiment | None) -> checks.Parts:
     """Collect the sections that are valid by themselves, so that they are checked even when others are not."""
-    raw = {key: value if isinstance(value, Mapping) else {} for key, value in data.items()}
-    market, paths = raw.get("market", {}), raw.get("paths", {})
-    underlyings, book, schedules = market.get("underlyings"), data.get("book"), data.get("schedules")
+    names = checks.names_in(data)
+    if whole is not None:
+        market, book, schedules = whole.market, whole.book, whole.schedules
+        underlyings, date, paths, hedge = market.underlyings, market.date, whole.paths, whole.hedge
+        return checks.Parts(data, names, date, underlyings, market, book, paths, hedge, schedules)
+    listed = {key: value for key in ("book", "schedules") if isinstance(value := data.get(key), list | tuple)}
+    raw = checks.get(data, "market", "underlyings")
     return checks.Parts(
-        names=checks.names_in(data),
-        source=paths.get("source"),
-        date_given=market.get("date") is not None,
-        date=_valid(parse_date, market.get("date")),
-        underlyings=(
-            whole.market.underlyings
-            if whole
-            else {name: _valid(Underlying.model_validate, value) for name, value in underlyings.items()}
-            if isinstance(underlyings, Mapping)
-            else {}
-        ),
-        market=whole.market if whole else _valid(Market.model_validate, data.get("market")),
-        book=(
-            whole.book
-            if whole
-            else tuple(_valid(Position.model_validate, row) for row in book)
-            if isinstance(book, list | tuple)
-            else ()
-        ),
-        paths=whole.paths if whole else _valid(_read_paths, data.get("paths")),
-        hedge=whole.hedge if whole else _valid(Hedge.model_validate, data.get("hedge", {})),
-        schedules=(
-            whole.schedules
-            if whole
-            else tuple(_valid(_read_schedule, row) for row in schedules)
-            if isinstance(schedules, list | tuple)
-            else ()
-        ),
-        costs=whole.costs if whole else _valid(Costs.model_validate, data.get("costs", {})),
+        data=data,
+        names=names,
+        date=_valid(parse_date, checks.get(data, "market", "date")),
+        underlyings={name: _valid(Underlying.model_validate, checks.get(raw, name)) for name in names},
+        market=_valid(Market.model_validate, data.get("market")),
+        book=tuple(_valid(Position.model_validate, row) for row in listed.get("book", ())),
+        paths=_valid(_read_paths, data.get("paths")),
+        hedge=_valid(Hedge.model_validate, data.get("hedge", {})),
+        schedules=tuple(_valid(read_schedule, row) for row in listed.get("schedules", ())),
     )
 
 
