@@ -1,0 +1,167 @@
+"""The headline of a study: plain figures with errors for machines, one sentence for the desk."""
+
+import math
+from typing import Any
+
+import numpy as np
+
+from hedgesim.study.choice import annual_hurdle
+from hedgesim.study.law import Offset, PowerLaw
+from hedgesim.study.money import money_with_error, percent
+from hedgesim.study.settings import RiskKind
+from hedgesim.study.studies import Study
+
+_RISK_WORDS: dict[RiskKind, str] = {
+    "std": "standard deviation of P&L",
+    "variance": "variance of P&L",
+    "es975": "expected shortfall (mean of the worst 2.5 % of lives)",
+}
+
+
+def headline(study: Study) -> dict[str, Any]:
+    """Every headline figure as `{"value", "se", "unit"}`, the choice and its confidence, the law, the warnings.
+
+    Plain JSON: unknown and unbounded numbers are null. Figures are those of the chosen schedule unless named otherwise.
+    """
+    choice, figures, parts = study.choice, study.distribution, study.variances
+    best = choice.chosen
+    cash = study.settings.currency or "currency"
+    cash2 = f"{cash}^2"
+    unit = cash2 if study.settings.risk == "variance" else cash
+    return {
+        "engine": study.engine,
+        "count": study.count,
+        "sentence": sentence(study),
+        "choice": {
+            "schedule": study.schedules[best],
+            "mean_cost": _figure(choice.mean_cost[best], choice.mean_cost_se[best], cash),
+            "mean_cost_counts": "costs and funding" if study.settings.mean == "costs" else "minus the total P&L",
+            "risk": _figure(choice.risk[best], choice.risk_se[best], unit),
+            "risk_measure": study.settings.risk,
+            "objective": _figure(choice.objective[best], choice.objective_se[best], cash),
+            "limit": _plain(study.settings.limit),
+            "limit_met": choice.limit_met,
+            "tied": tied(study),
+            "confidence": study.settings.confidence,
+            "best_at_cost_of_risk": {"from": _plain(choice.best_from[best]), "to": _plain(choice.best_to[best])},
+        },
+        "cost_of_risk": {
+            "value": study.settings.cost_of_risk,
+            "words": cost_of_risk_words(study),
+            "annual_hurdle": _plain(annual_hurdle(study.settings)),
+            "years": study.settings.years,
+        },
+        "mean": _figure(figures.mean[best], figures.mean_se[best], cash),
+        "std": _figure(figures.std[best], figures.std_se[best], cash),
+        "es95": _figure(figures.es95[best], figures.es95_se[best], cash),
+        "es975": _figure(figures.es975[best], figures.es975_se[best], cash),
+        "gross_variance": _figure(parts.value.gross[best], parts.error.gross[best], cash2),
+        "floor_variance": _figure(parts.value.floor[best], parts.error.floor[best], cash2),
+        "removable": _figure(parts.value.removable[best], parts.error.removable[best], cash2),
+        "removable_share": _figure(parts.removable_share[best], parts.removable_share_se[best], "of gross variance"),
+        "below_look_variance_estimate": _plain(parts.below_look),
+        "law": _law(study.frequency.law, study.frequency.reason, cash2),
+        "warnings": list(study.warnings),
+    }
+
+
+def sentence(study: Study) -> str:
+    """The finding in a trader's words; the figures after ± are one standard error."""
+    choice, figures, settings = study.choice, study.distribution, study.settings
+    best = choice.chosen
+    cash = settings.currency
+    cost = float(choice.mean_cost[best])
+    amount = money_with_error(abs(cost), float(choice.mean_cost_se[best]), currency=cash)
+    if settings.mean == "costs":
+        price = f"it costs {amount} a life"
+    else:
+        price = f"it {'earns' if cost < 0 else 'loses'} {amount} a life on average"
+    std = money_with_error(float(figures.std[best]), float(figures.std_se[best]), currency=cash)
+    clauses = [
+        f"{_command(study.schedules[best])}: {price} and leaves a P&L standard deviation of {std}{_floor(study)}"
+    ]
+    if not choice.limit_met:
+        clauses.append("no schedule meets the risk limit, this one comes nearest")
+    others = tied(study)
+    sure = f"at {100 * settings.confidence:g} % confidence"
+    if others:
+        names = others[0] if len(others) == 1 else f"{', '.join(others[:-1])} and {others[-1]}"
+        clauses.append(f"{names} {'is' if len(others) == 1 else 'are'} statistically tied {sure}")
+    elif len(study.schedules) > 1:
+        rival = "" if choice.limit_met and choice.within_limit.all() else " within the limit" * choice.limit_met
+        clauses.append(f"no other schedule{rival} is as good {sure}")
+    return "; ".join(clauses) + "."
+
+
+def tied(study: Study) -> list[str]:
+    """Schedules that cannot be told from the chosen one, itself left out."""
+    flags = study.choice.tied
+    return [name for i, name in enumerate(study.schedules) if flags[i] and i != study.choice.chosen]
+
+
+def cost_of_risk_words(study: Study) -> str:
+    """What the cost of risk says, with its equivalent as an annual hurdle."""
+    settings = study.settings
+    cash = settings.currency or "currency unit"
+    per = f"{cash} squared" if settings.risk == "variance" else cash
+    words = (
+        f"{settings.cost_of_risk:g} {cash} of expected P&L given up for each {per} of {_RISK_WORDS[settings.risk]} "
+        f"removed, over a life of {settings.years:.4g} years"
+    )
+    hurdle = annual_hurdle(settings)
+    if math.isnan(hurdle):
+        return words
+    return f"{words}; {settings.cost_of_risk:g} = an annual return-to-risk hurdle of {hurdle:.3g} x sqrt(years)"
+
+
+def _command(schedule: str) -> str:
+    return f"Rebalance {schedule}" if schedule.startswith(("every ", "at ")) else f"Run {schedule}"
+
+
+def _floor(study: Study) -> str:
+    """The clause on what trading more would remove."""
+    share = float(study.variances.removable_share[study.choice.chosen])
+    if math.isnan(share):
+        return ""
+    if not study.variances.floor_known:
+        return f"; trading at every look would change its variance before costs by {percent(-share)}"
+    if share <= 0.0:
+        return ", whose variance before costs trading more would not reduce"
+    return f", {percent(1.0 - share)} of whose variance before costs no schedule removes"
+
+
+def _law(law: PowerLaw | None, reason: str, unit: str) -> dict[str, Any]:
+    if law is None:
+        return {"exponent": None, "reason": reason}
+    return {
+        "formula": "removable variance = coefficient x trades^-exponent"
+        if math.isinf(law.reference)
+        else f"removable variance = coefficient x (trades^-exponent - {law.reference:g}^-exponent)",
+        "exponent": _figure(law.exponent, law.exponent_se, "power of trades"),
+        "exponent_interval": [_plain(law.low), _plain(law.high)],
+        "coefficient": _figure(law.coefficient, law.coefficient_se, unit),
+        "chi2": _plain(law.chi2),
+        "degrees_of_freedom": law.dof,
+        "p_value": _plain(law.p_value),
+        "misfit": law.misfit,
+        "schedules": list(law.points),
+        "left_out": [{"schedule": name, "reason": why} for name, why in law.left_out],
+        "free_floor_check": _offset(law.offset, unit),
+    }
+
+
+def _offset(offset: Offset | None, unit: str) -> dict[str, Any] | None:
+    if offset is None:
+        return None
+    return {
+        "floor_less_stated_floor": _figure(offset.value, offset.value_se, unit),
+        "exponent": _figure(offset.exponent, offset.exponent_se, "power of trades"),
+    }
+
+
+def _figure(value: float, error: float, unit: str) -> dict[str, Any]:
+    return {"value": _plain(value), "se": _plain(error), "unit": unit}
+
+
+def _plain(value: float | np.floating[Any] | None) -> float | None:
+    return None if value is None or not math.isfinite(value) else float(value)
