@@ -19,7 +19,6 @@ from hedgesim.kernels.simulate import (
     DAY_ROWS,
     PATH_ROWS,
     RESIDUAL_BINS,
-    TILE,
     TRADE_ROWS,
     Accounts,
     BookTables,
@@ -29,7 +28,7 @@ from hedgesim.kernels.simulate import (
     close_accounts,
     run_chunk,
 )
-from hedgesim.kernels.tables import Table
+from hedgesim.kernels.tables import TILE
 from hedgesim.market import Floats, Ints, LookGrid, Market
 from hedgesim.paths.gbm import Gbm
 from hedgesim.schedules import Compiled
@@ -80,9 +79,7 @@ class _Chunk:
     turnover_detail: Floats | None
 
 
-def prepare(
-    *, market: Market, book: Book, grid: LookGrid, compiled: Compiled, source: Gbm, costs: CostTerms
-) -> Setup:
+def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, source: Gbm, costs: CostTerms) -> Setup:
     """Tables and constants of an experiment for the kernel."""
     looks, names = grid.looks, market.names
     underlyings = len(names)
@@ -216,7 +213,7 @@ def simulate(
 
 def _chunk_bounds(count: int) -> list[tuple[int, int]]:
     wanted = -(-count // _CHUNKS_WANTED)
-    unit = TILE if wanted >= TILE else 16
+    unit = TILE if wanted >= TILE else 64
     size = min(-(-wanted // unit) * unit, _LARGEST_CHUNK)
     return [(a, min(a + size, count)) for a in range(0, count, size)]
 
@@ -383,9 +380,7 @@ class _Merger:
         )
 
 
-def _merge(
-    a: tuple[float, Floats, Floats], b: tuple[float, Floats, Floats]
-) -> tuple[float, Floats, Floats]:
+def _merge(a: tuple[float, Floats, Floats], b: tuple[float, Floats, Floats]) -> tuple[float, Floats, Floats]:
     n = a[0] + b[0]
     if a[0] == 0.0:
         return b

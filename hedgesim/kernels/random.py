@@ -13,6 +13,8 @@ from numpy.typing import NDArray
 from hedgesim.kernels.jit import device, kernel
 from hedgesim.kernels.vector_math import exp, log
 
+Floats = NDArray[np.float64]
+
 _LEVELS = 256
 _TAIL_START = "3.6541528853610087963519472518"
 _WARM_UP_ROUNDS = 12
@@ -57,6 +59,7 @@ def _ziggurat() -> tuple[NDArray[np.uint64], NDArray[np.float64], NDArray[np.flo
 
 ZIGGURAT = _ziggurat()
 _BOUND, _WIDTH, _HEIGHT = ZIGGURAT
+_BOUND_AS_FLOAT = _BOUND.astype(np.float64)
 _TAIL = float(_TAIL_START)
 _INV_TAIL = float(1 / Decimal(_TAIL_START))
 
@@ -129,14 +132,21 @@ def _finish(state: NDArray[np.uint64], p: int, r: np.uint64) -> float:
 
 
 @device
-def draw_normals(state: NDArray[np.uint64], raw: NDArray[np.uint64], out: NDArray[np.float64]) -> None:
-    """One normal for each path of the tile; `raw` is scratch of the same length.
+def draw_normals(
+    state: NDArray[np.uint64],
+    raw: NDArray[np.uint64],
+    width: Floats,
+    spare: Floats,
+    late: NDArray[np.int32],
+    out: Floats,
+) -> None:
+    """One normal for each path of the tile.
 
-    The first pass has no branch, so that it vectorises; the 1 % of draws that leave the sure part of their strip are
-    finished one by one, each on its own path's stream.
+    The passes over the tile have no branch; the 1 % of draws that leave the sure part of their strip are finished one
+    by one, each on its own path's stream. `raw`, `width`, `spare` (as long as the tile) and `late` (one longer) are
+    scratch.
     """
     n = out.shape[0]
-    late = 0
     a_, b_, c_, w_ = state[0], state[1], state[2], state[3]
     for p in range(n):
         a, b, c, w = a_[p], b_[p], c_[p], w_[p]
@@ -147,33 +157,41 @@ def draw_normals(state: NDArray[np.uint64], raw: NDArray[np.uint64], out: NDArra
         w_[p] = w + _U1
         raw[p] = r
     for p in range(n):
+        level = np.uint32(raw[p] & _U255)
+        width[p] = _WIDTH[level]
+        spare[p] = _BOUND_AS_FLOAT[level]
+    for p in range(n):
         r = raw[p]
-        level = r & _U255
-        whole = (r >> _U9) & _U52_MASK
-        x = np.float64(np.int64(whole)) * _WIDTH[level]
+        whole = np.float64(np.int64((r >> _U9) & _U52_MASK))
+        x = whole * width[p]
         out[p] = -x if (r >> _U8) & _U1 else x
-        late += whole >= _BOUND[level]
-    if late:
-        for p in range(n):
-            r = raw[p]
-            if (r >> _U9) & _U52_MASK >= _BOUND[r & _U255]:
-                out[p] = _finish(state, p, r)
+        spare[p] -= whole
+    found = 0
+    for p in range(n):
+        late[found] = p
+        found += spare[p] <= 0.0
+    for k in range(found):
+        p = late[k]
+        out[p] = _finish(state, p, raw[p])
 
 
 @kernel
-def fill_normals(seed: int, stream: int, first_path: int, out: NDArray[np.float64]) -> None:
+def continue_normals(state: NDArray[np.uint64], out: Floats) -> None:
+    """Normals by (look, path) from a given SFC64 state (4, path), which is moved on."""
+    n = out.shape[1]
+    raw, late = np.empty(n, dtype=np.uint64), np.empty(n + 1, dtype=np.int32)
+    width, spare = np.empty(n), np.empty(n)
+    for look in range(out.shape[0]):
+        draw_normals(state, raw, width, spare, late, out[look])
+
+
+@kernel
+def fill_normals(seed: int, stream: int, first_path: int, out: Floats) -> None:
     """Normals by (look, path) for the paths from `first_path` on, as every engine sees them."""
     n = out.shape[1]
     state = np.empty((4, n), dtype=np.uint64)
-    raw = np.empty(n, dtype=np.uint64)
+    raw, late = np.empty(n, dtype=np.uint64), np.empty(n + 1, dtype=np.int32)
+    width, spare = np.empty(n), np.empty(n)
     seed_streams(np.uint64(seed), np.uint64(stream), first_path, state)
     for look in range(out.shape[0]):
-        draw_normals(state, raw, out[look])
-
-
-@kernel
-def continue_normals(state: NDArray[np.uint64], out: NDArray[np.float64]) -> None:
-    """Normals by (look, path) from a given SFC64 state (4, path), which is moved on."""
-    raw = np.empty(out.shape[1], dtype=np.uint64)
-    for look in range(out.shape[0]):
-        draw_normals(state, raw, out[look])
+        draw_normals(state, raw, width, spare, late, out[look])

@@ -12,13 +12,12 @@ from numpy.typing import NDArray
 
 from hedgesim.kernels.jit import device, kernel
 from hedgesim.kernels.random import draw_normals, seed_streams
-from hedgesim.kernels.tables import Table, lookup
+from hedgesim.kernels.tables import TILE, Table, lookup
 from hedgesim.kernels.vector_math import as_bits, exp, expm1_near_zero, expm1_tiny, fma
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
-TILE = 256
 # Rows of the results, by underlying and path: what all schedules share, and what each has of its own.
 PATH_ROWS = ("revaluation", "vol_gap", "sampling", "remainder", "slope_gain", "settled")
 TRADE_ROWS = ("gain", "turnover", "units", "idle", "idle_discount")
@@ -143,14 +142,15 @@ def _trade(
     delivered: Floats,
     y: Floats,
     price: Floats,
-    discount: float,
-    count_units: bool,
     hedge: Floats,
-    rows: Floats,
+    gain: Floats,
+    turnover: Floats,
     traded: Floats,
-) -> None:
-    """Set the hedge to `target`; units handed over by settling options count as bought, but cost nothing."""
-    gain, turnover = rows[0], rows[1]
+) -> int:
+    """Set the hedge to `target`; units handed over by settling options count as bought, but cost nothing.
+
+    Returns how many paths had nothing to trade; `traded` is set to the absolute units.
+    """
     idle = 0
     for p in range(len(target)):
         bought = target[p] - hedge[p]
@@ -160,73 +160,50 @@ def _trade(
         turnover[p] = fma(size, price[p], turnover[p])
         traded[p] = size
         idle += size == 0.0
-    if count_units:
-        units = rows[2]
-        for p in range(len(target)):
-            units[p] = fma(traded[p], discount, units[p])
-    if idle > 0:
-        for p in range(len(target)):
-            if traded[p] == 0.0:
-                rows[3, p] += 1.0
-                rows[4, p] += discount
+    return idle
 
 
 @device
-def _step(
-    mean: float,
-    sd: float,
-    variance: float,
-    hedge_variance: float,
-    step_s: float,
-    weight: float,
-    one_vol: bool,
-    z: Floats,
-    slope: Floats,
-    gamma: Floats,
-    hedge_gamma: Floats,
-    log_x: Floats,
-    x: Floats,
-    y: Floats,
-    rows: Floats,
-) -> None:
-    """Move the paths over one look and book what the look adds. gamma is X P'(log X), times k^2 in hedge_gamma."""
-    gap, sampling, pdx = rows[1], rows[2], rows[4]
+def _grow(mean: float, sd: float, z: Floats, log_x: Floats, x: Floats, gain: Floats, dx: Floats) -> None:
+    """Move the paths over one look: `gain` is set to X_i+1 / X_i - 1, `dx` to X_i+1 - X_i."""
     reach = abs(mean) + _LARGEST_NORMAL * sd
     if reach < 1.0 / 12.0:
         for p in range(len(z)):
-            z[p] = fma(sd, z[p], mean)
-            gain = expm1_tiny(z[p])
-            dx = x[p] * gain
-            half = 0.5 * gamma[p]
-            sampling[p] = fma(half, fma(gain, gain, -variance), sampling[p])
-            pdx[p] = fma(slope[p], dx, pdx[p])
-            y[p] = fma(weight, dx, y[p])
-            x[p] += dx
-            log_x[p] += z[p]
+            step = fma(sd, z[p], mean)
+            log_x[p] += step
+            gain[p] = expm1_tiny(step)
+    elif reach < 0.34:
+        for p in range(len(z)):
+            step = fma(sd, z[p], mean)
+            log_x[p] += step
+            gain[p] = expm1_near_zero(step)
     else:
         for p in range(len(z)):
-            z[p] = fma(sd, z[p], mean)
-            gain = expm1_near_zero(z[p]) if reach < 0.34 else exp(z[p]) - 1.0
-            dx = x[p] * gain
-            half = 0.5 * gamma[p]
-            sampling[p] = fma(half, fma(gain, gain, -variance), sampling[p])
-            pdx[p] = fma(slope[p], dx, pdx[p])
-            y[p] = fma(weight, dx, y[p])
-            x[p] += dx
-            log_x[p] += z[p]
-    if one_vol:
-        excess = 0.5 * (variance - hedge_variance)
-        for p in range(len(z)):
-            gap[p] = fma(excess, gamma[p], gap[p])
-    else:
-        for p in range(len(z)):
-            gap[p] += 0.5 * (variance * gamma[p] - step_s * hedge_gamma[p])
+            step = fma(sd, z[p], mean)
+            log_x[p] += step
+            gain[p] = exp(step) - 1.0
+    for p in range(len(z)):
+        dx[p] = x[p] * gain[p]
+        x[p] += dx[p]
 
 
 @device
-def _count_residuals(size: Floats, bins: Ints) -> float:
+def _book_look(
+    variance: float, weight: float, slope: Floats, gamma: Floats, gain: Floats, dx: Floats, y: Floats, rows: Floats
+) -> None:
+    """Book what one look adds to sampling and to sum P dX; gamma is X P'(log X)."""
+    sampling, slope_gain = rows[2], rows[4]
+    for p in range(len(gain)):
+        sampling[p] = fma(0.5 * gamma[p], fma(gain[p], gain[p], -variance), sampling[p])
+    for p in range(len(gain)):
+        slope_gain[p] = fma(slope[p], dx[p], slope_gain[p])
+        y[p] = fma(weight, dx[p], y[p])
+
+
+@device
+def _count_residuals(size: Floats, n: int, bins: Ints) -> float:
     total = 0.0
-    for p in range(len(size)):
+    for p in range(n):
         total += size[p]
         place = (as_bits(size[p]) >> _BIN_SHIFT) - _FIRST_BIN
         bins[min(max(place, np.int64(0)), np.int64(RESIDUAL_BINS - 1))] += 1
@@ -251,6 +228,8 @@ def run_chunk(
 ) -> None:
     """Ledger rows of the paths from `first_path` on.
 
+    The last tile is worked off whole and its surplus paths are dropped.
+
     Parameters
     ----------
     seed, first_path : the normals of path n are a pure function of (seed, underlying, n)
@@ -266,151 +245,141 @@ def run_chunk(
     count = path_out.shape[2]
     underlyings = path_out.shape[0]
     schedules = hedging.schedules
-    log_x, x, y = (
-        np.empty((underlyings, TILE)),
-        np.empty((underlyings, TILE)),
-        np.empty((underlyings, TILE)),
-    )
-    state = np.empty((underlyings, 4, TILE), dtype=np.uint64)
-    raw = np.empty(TILE, dtype=np.uint64)
-    fresh = np.empty((underlyings, TILE))
-    z = np.empty(TILE)
-    slope, gamma = np.empty((underlyings, TILE)), np.empty((underlyings, TILE))
-    hedge_gamma = np.empty((underlyings, TILE))
-    target, price = np.empty((underlyings, TILE)), np.empty((underlyings, TILE))
-    paid, delivered = np.empty((underlyings, TILE)), np.zeros((underlyings, TILE))
-    scratch, scratch2, scratch3 = np.empty(TILE), np.empty(TILE), np.empty(TILE)
-    hedge = np.empty((schedules, underlyings, TILE))
-    wealth, before, book_value = np.empty(TILE), np.empty((schedules, TILE)), np.empty(TILE)
+    lanes = min(TILE, count)
+    tile = (underlyings, lanes)
+    log_x, x, y = np.empty(tile), np.empty(tile), np.empty(tile)
+    slope, gamma, hedge_gamma = np.empty(tile), np.empty(tile), np.empty(tile)
+    target, price, paid, delivered = np.empty(tile), np.empty(tile), np.empty(tile), np.zeros(tile)
+    fresh = np.empty(tile)
+    state = np.empty((underlyings, 4, lanes), dtype=np.uint64)
+    raw, late = np.empty(lanes, dtype=np.uint64), np.empty(lanes + 1, dtype=np.int32)
+    z, gain, dx = np.empty(lanes), np.empty(lanes), np.empty(lanes)
+    cell, part = np.empty(lanes, dtype=np.int32), np.empty(lanes)
+    one, two, three = np.empty(lanes), np.empty(lanes), np.empty(lanes)
+    rows = np.empty((underlyings, len(PATH_ROWS), lanes))
+    hedge = np.empty((schedules, underlyings, lanes))
+    trades = np.empty((schedules, underlyings, len(TRADE_ROWS), lanes))
+    before = np.empty((schedules, lanes))
+    days = np.empty((schedules, len(DAY_ROWS), lanes))
 
-    for begin in range(0, count, TILE):
-        n = min(TILE, count - begin)
-        end = begin + n
+    for begin in range(0, count, lanes):
+        n = min(lanes, count - begin)
         for u in range(underlyings):
-            seed_streams(np.uint64(seed), np.uint64(u), first_path + begin, state[u, :, :n])
-            log_x[u, :n] = diffusion.log_start[u]
-            x[u, :n] = diffusion.start[u]
-            y[u, :n] = 0.0
-            paid[u, :n] = 0.0
-            path_out[u, :, begin:end] = 0.0
+            seed_streams(np.uint64(seed), np.uint64(u), first_path + begin, state[u])
+            log_x[u] = diffusion.log_start[u]
+            x[u] = diffusion.start[u]
             for s in range(schedules):
-                hedge[s, u, :n] = hedging.initial[u]
-                trade_out[s, u, :, begin:end] = 0.0
-        if watch:
-            day_out[:, 0:2, begin:end] = 0.0
-            day_out[:, 2, begin:end] = np.inf
+                hedge[s, u] = hedging.initial[u]
+        y[:] = 0.0
+        paid[:] = 0.0
+        rows[:] = 0.0
+        trades[:] = 0.0
+        days[:, 0:2] = 0.0
+        days[:, 2] = np.inf
 
         for i in range(looks + 1):
             for u in range(underlyings):
                 settles = book.payoff.first[u, i] >= 0
                 if settles:
-                    _settle(book.payoff, u, i, x[u, :n], paid[u, :n], delivered[u, :n])
-                lookup(book.slope, u, i, log_x[u, :n], slope[u, :n], gamma[u, :n])
+                    _settle(book.payoff, u, i, x[u], paid[u], delivered[u])
+                lookup(book.slope, u, i, log_x[u], cell, part, slope[u], gamma[u])
                 factor = hedging.price_factor[u, i]
                 unwind = -hedging.inverse_weight[u, i]
-                for p in range(n):
+                for p in range(lanes):
                     gamma[u, p] *= x[u, p]
                     target[u, p] = unwind * slope[u, p]
                     price[u, p] = factor * x[u, p]
                 for k in range(hedging.first[i], hedging.first[i + 1]):
                     s = hedging.who[k]
-                    _trade(
-                        target[u, :n],
-                        delivered[u, :n],
-                        y[u, :n],
-                        price[u, :n],
-                        hedging.discount[i],
-                        hedging.count_units,
-                        hedge[s, u, :n],
-                        trade_out[s, u, :, begin:end],
-                        scratch[:n],
-                    )
+                    mine = trades[s, u]
+                    idle = _trade(target[u], delivered[u], y[u], price[u], hedge[s, u], mine[0], mine[1], one)
+                    if hedging.count_units:
+                        for p in range(lanes):
+                            mine[2, p] = fma(one[p], hedging.discount[i], mine[2, p])
+                    if idle > 0:
+                        for p in range(lanes):
+                            if one[p] == 0.0:
+                                mine[3, p] += 1.0
+                                mine[4, p] += hedging.discount[i]
                 if settles:
-                    delivered[u, :n] = 0.0
+                    delivered[u] = 0.0
 
-            if watch:
-                if i < looks:
-                    for s in range(schedules):
-                        wealth[:n] = 0.0
-                        for u in range(underlyings):
-                            for p in range(n):
-                                gap = abs(hedge[s, u, p] - target[u, p])
-                                wealth[p] += gap * price[u, p] / hedging.discount[i]
-                        residual_sum[s] += _count_residuals(wealth[:n], residual_bins[s])
-                if i == 0 or book.valued[i]:
-                    book_value[:n] = 0.0
+            if watch and i < looks:
+                for s in range(schedules):
+                    one[:] = 0.0
                     for u in range(underlyings):
-                        lookup(book.mark_slope, u, i, log_x[u, :n], scratch[:n], scratch3[:n])
-                        lookup(book.mark_strike, u, i, log_x[u, :n], scratch2[:n], scratch3[:n])
-                        for p in range(n):
-                            book_value[p] += scratch[p] * x[u, p] - scratch2[p] + paid[u, p]
-                    for s in range(schedules):
-                        for p in range(n):
-                            wealth[p] = book_value[p]
-                        if i > 0:
-                            for u in range(underlyings):
-                                rows = trade_out[s, u, :, begin:end]
-                                for p in range(n):
-                                    wealth[p] += rows[0, p] + hedge[s, u, p] * y[u, p]
-                                    wealth[p] -= day_costs.half_spread[u] * rows[1, p]
-                                    wealth[p] -= day_costs.per_unit[u] * rows[2, p]
-                                    wealth[p] -= day_costs.per_trade[u] * (day_costs.tickets[s, i] - rows[4, p])
-                            for p in range(n):
-                                day = wealth[p] - before[s, p]
-                                day_out[s, 0, begin + p] += day
-                                day_out[s, 1, begin + p] += day * day
-                                day_out[s, 2, begin + p] = min(day_out[s, 2, begin + p], day)
-                        for p in range(n):
-                            before[s, p] = wealth[p]
+                        for p in range(lanes):
+                            one[p] += abs(hedge[s, u, p] - target[u, p]) * price[u, p] / hedging.discount[i]
+                    residual_sum[s] += _count_residuals(one, n, residual_bins[s])
+            if watch and (i == 0 or book.valued[i]):
+                z[:] = 0.0
+                for u in range(underlyings):
+                    lookup(book.mark_slope, u, i, log_x[u], cell, part, one, three)
+                    lookup(book.mark_strike, u, i, log_x[u], cell, part, two, three)
+                    for p in range(lanes):
+                        z[p] += one[p] * x[u, p] - two[p] + paid[u, p]
+                for s in range(schedules):
+                    one[:] = z
+                    if i > 0:
+                        for u in range(underlyings):
+                            mine = trades[s, u]
+                            for p in range(lanes):
+                                one[p] += mine[0, p] + hedge[s, u, p] * y[u, p]
+                                one[p] -= day_costs.half_spread[u] * mine[1, p] + day_costs.per_unit[u] * mine[2, p]
+                                one[p] -= day_costs.per_trade[u] * (day_costs.tickets[s, i] - mine[4, p])
+                        for p in range(lanes):
+                            day = one[p] - before[s, p]
+                            days[s, 0, p] += day
+                            days[s, 1, p] += day * day
+                            days[s, 2, p] = min(days[s, 2, p], day)
+                    before[s] = one
 
             if i < looks:
                 for u in range(underlyings):
-                    draw_normals(state[u, :, :n], raw[:n], fresh[u, :n])
+                    draw_normals(state[u], raw, one, two, late, fresh[u])
                 for u in range(underlyings):
-                    for p in range(n):
-                        z[p] = diffusion.mixing[u, u] * fresh[u, p]
+                    share = diffusion.mixing[u, u]
+                    for p in range(lanes):
+                        z[p] = share * fresh[u, p]
                     for v in range(u):
                         share = diffusion.mixing[u, v]
-                        for p in range(n):
+                        for p in range(lanes):
                             z[p] = fma(share, fresh[v, p], z[p])
-                    if not diffusion.one_vol:
-                        lookup(book.variance_slope, u, i, log_x[u, :n], scratch[:n], hedge_gamma[u, :n])
-                        for p in range(n):
-                            hedge_gamma[u, p] *= x[u, p]
-                    _step(
-                        diffusion.mean[u, i],
-                        diffusion.sd[u, i],
-                        diffusion.variance[u, i],
-                        diffusion.hedge_variance[u, i],
-                        diffusion.step_s[i],
-                        hedging.weight[u, i],
-                        diffusion.one_vol,
-                        z[:n],
-                        slope[u, :n],
-                        gamma[u, :n],
-                        hedge_gamma[u, :n],
-                        log_x[u, :n],
-                        x[u, :n],
-                        y[u, :n],
-                        path_out[u, :, begin:end],
-                    )
+                    gap = rows[u, 1]
+                    variance = diffusion.variance[u, i]
+                    if diffusion.one_vol:
+                        excess = 0.5 * (variance - diffusion.hedge_variance[u, i])
+                        for p in range(lanes):
+                            gap[p] = fma(excess, gamma[u, p], gap[p])
+                    else:
+                        lookup(book.variance_slope, u, i, log_x[u], cell, part, one, two)
+                        for p in range(lanes):
+                            gap[p] += 0.5 * (variance * gamma[u, p] - diffusion.step_s[i] * x[u, p] * two[p])
+                    _grow(diffusion.mean[u, i], diffusion.sd[u, i], z, log_x[u], x[u], gain, dx)
+                    _book_look(variance, hedging.weight[u, i], slope[u], gamma[u], gain, dx, y[u], rows[u])
 
         for u in range(underlyings):
             # What is still open at the last look is valued, at both vol sets; tables without cells give zero.
-            lookup(book.slope, u, looks, log_x[u, :n], scratch[:n], scratch3[:n])
-            lookup(book.hedge_strike, u, looks, log_x[u, :n], scratch2[:n], scratch3[:n])
-            rows = path_out[u, :, begin:end]
-            for p in range(n):
-                rows[3, p] = scratch[p] * x[u, p] - scratch2[p]
-            lookup(book.mark_slope, u, looks, log_x[u, :n], scratch[:n], scratch3[:n])
-            lookup(book.mark_strike, u, looks, log_x[u, :n], scratch2[:n], scratch3[:n])
-            vega_hedge = book.start_hedge[u] - book.start_mark[u]
-            for p in range(n):
-                marked = scratch[p] * x[u, p] - scratch2[p]
-                rows[0, p] = marked - rows[3, p] + vega_hedge
-                rows[5, p] = paid[u, p] + marked
+            lookup(book.slope, u, looks, log_x[u], cell, part, one, three)
+            lookup(book.hedge_strike, u, looks, log_x[u], cell, part, two, three)
+            for p in range(lanes):
+                z[p] = one[p] * x[u, p] - two[p]
+            lookup(book.mark_slope, u, looks, log_x[u], cell, part, one, three)
+            lookup(book.mark_strike, u, looks, log_x[u], cell, part, two, three)
+            at_start = book.start_hedge[u] - book.start_mark[u]
+            for p in range(lanes):
+                marked = one[p] * x[u, p] - two[p]
+                rows[u, 0, p] = marked - z[p] + at_start
                 # Telescoped: the change of U^k less its delta and gamma terms.
-                rows[3, p] += paid[u, p] - book.start_hedge[u] - rows[4, p] - rows[1, p] - rows[2, p]
+                explained = rows[u, 4, p] + rows[u, 1, p] + rows[u, 2, p]
+                rows[u, 3, p] = z[p] + paid[u, p] - book.start_hedge[u] - explained
+                rows[u, 5, p] = paid[u, p] + marked
+
+        end = begin + n
+        path_out[:, :, begin:end] = rows[:, :, :n]
+        trade_out[:, :, :, begin:end] = trades[:, :, :, :n]
+        if watch:
+            day_out[:, :, begin:end] = days[:, :, :n]
 
 
 class Accounts(NamedTuple):

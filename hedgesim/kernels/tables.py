@@ -16,6 +16,9 @@ from hedgesim.kernels.vector_math import fma, normal_cdf, normal_pdf
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
+# Paths that a kernel works off side by side.
+TILE = 1024
+
 
 class Table(NamedTuple):
     """Tables of one function family, by underlying and look.
@@ -79,8 +82,20 @@ def fill_cells(
 
 
 @device
-def lookup(table: Table, underlying: int, look: int, log_price: Floats, value: Floats, slope: Floats) -> None:
-    """F and dF/dy at each log price; beyond the ends of the table the value at the end, with its slope there."""
+def lookup(
+    table: Table,
+    underlying: int,
+    look: int,
+    log_price: Floats,
+    cell: NDArray[np.int32],
+    part: Floats,
+    value: Floats,
+    slope: Floats,
+) -> None:
+    """F and dF/dy at each log price; beyond the ends of the table the value at the end, with its slope there.
+
+    `cell` and `part` are scratch: finding the cells apart from reading them lets the first loop vectorise.
+    """
     cells = table.cells[underlying, look]
     if cells == 0:
         for p in range(len(log_price)):
@@ -88,21 +103,24 @@ def lookup(table: Table, underlying: int, look: int, log_price: Floats, value: F
             slope[p] = 0.0
         return
     first = table.start[underlying, look]
-    part = table.coefficients[first : first + cells]
+    rows = table.coefficients[first : first + cells]
     low, per_cell = table.low[underlying, look], table.per_cell[underlying, look]
     top = np.float64(cells) - 1e-9
     for p in range(len(log_price)):
-        x = min(max((log_price[p] - low) * per_cell, 0.0), top)
-        cell = np.int32(x)
-        u = x - cell
-        c5 = part[cell, 5]
-        f = fma(c5, u, part[cell, 4])
-        d = fma(c5, u, f)
-        f = fma(f, u, part[cell, 3])
+        place = min(max((log_price[p] - low) * per_cell, 0.0), top)
+        whole = np.int32(place)
+        cell[p] = whole
+        part[p] = place - whole
+    for p in range(len(log_price)):
+        u = part[p]
+        c = np.uint32(cell[p])
+        f = fma(rows[c, 5], u, rows[c, 4])
+        d = fma(rows[c, 5], u, f)
+        f = fma(f, u, rows[c, 3])
         d = fma(d, u, f)
-        f = fma(f, u, part[cell, 2])
+        f = fma(f, u, rows[c, 2])
         d = fma(d, u, f)
-        f = fma(f, u, part[cell, 1])
+        f = fma(f, u, rows[c, 1])
         d = fma(d, u, f)
-        value[p] = fma(f, u, part[cell, 0])
+        value[p] = fma(f, u, rows[c, 0])
         slope[p] = d * per_cell
