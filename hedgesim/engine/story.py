@@ -10,9 +10,12 @@ import numpy as np
 from hedgesim.book import Book, premium_received
 from hedgesim.costs import CostTerms
 from hedgesim.engine.ledger import COST_COMPONENTS, Story
-from hedgesim.market import Floats, Ints, LookGrid, Market, frozen
+from hedgesim.market import Flags, Floats, Ints, LookGrid, Market, frozen
 from hedgesim.pricing import Greeks, greeks
 from hedgesim.schedules import Compiled
+
+# Part of the units in the book below which a trade is no trade: the twin of the constant in `kernels.replay`.
+_SMALLEST_TRADE = 1e-12
 
 
 @dataclass(frozen=True)
@@ -143,7 +146,10 @@ def look_by_look(
     target = np.zeros_like(price)
     target[:, :-1] = -slope[:, :-1] / weight
     delivered = _delivered(book, market, look, final)
-    held, trade = _hedge(target, delivered, compiled.trades_at[schedule_index], book.initial_units)
+    gross_units = np.bincount(book.underlying, np.abs(book.units), len(market.names)) + np.abs(book.initial_units)
+    held, trade = _hedge(
+        target, delivered, compiled.trades_at[schedule_index], book.initial_units, _SMALLEST_TRADE * gross_units
+    )
 
     model = -premium_received(book, market)
     fair = scale[:, 0] * with_mark.value[:, 0]
@@ -210,15 +216,18 @@ def _delivered(book: Book, market: Market, look: Ints, final: Floats) -> Floats:
     return _by_underlying(np.where(look == book.expiry_look[:, None], units[:, None], 0.0), book, market)
 
 
-def _hedge(target: Floats, delivered: Floats, trades_at: Floats, initial: Floats) -> tuple[Floats, Floats]:
-    """Units held after each look, and units bought at it."""
+def _hedge(
+    target: Floats, delivered: Floats, trades_at: Flags, initial: Floats, smallest: Floats
+) -> tuple[Floats, Floats]:
+    """Units held after each look, and units bought at it; nothing is bought where less than `smallest` is wanted."""
     held, trade = np.zeros_like(target), np.zeros_like(target)
     now = initial.astype(np.float64)
     for i, trades in enumerate(trades_at):
         now = now + delivered[:, i]
         if trades:
-            trade[:, i] = target[:, i] - now
-            now = target[:, i]
+            wanted = target[:, i] - now
+            trade[:, i] = np.where(np.abs(wanted) > smallest, wanted, 0.0)
+            now = np.where(trade[:, i] != 0.0, target[:, i], now)
         held[:, i] = now
     return held, trade
 

@@ -21,6 +21,10 @@ Flags = NDArray[np.bool_]
 PREMIUM_EDGE, REVALUATION, VOL_GAP_SEEN, VOL_MARK, LAG, REMAINDER, SPREAD, COMMISSION, TICKETS = range(9)
 COMPONENT_ROWS = 9
 
+# A trade below this part of the units in the book is no trade and needs no ticket: a delivery that closes the hedge
+# leaves rounding of this size, and so do deltas of options that are all but worthless.
+SMALLEST_TRADE = 1e-12
+
 
 class Terms(NamedTuple):
     """Prices, book, market and schedules of all inceptions; arrays are read only.
@@ -201,6 +205,7 @@ def replay_inceptions(first: int, last: int, terms: Terms, out: Results) -> None
     paid = np.zeros(underlyings)
     held = np.zeros((schedules, underlyings))
     account = np.zeros((schedules, underlyings))
+    scale = np.zeros(underlyings)
     wealth = np.zeros(schedules)
     watched_looks = out.residual.shape[1]
     for n in range(first, last):
@@ -210,6 +215,9 @@ def replay_inceptions(first: int, last: int, terms: Terms, out: Results) -> None
         settled[:] = 0.0
         wealth[:] = 0.0
         _premiums(terms, n, premium_edge, paid)
+        scale[:] = np.abs(terms.initial_units)
+        for j in range(len(terms.underlying)):
+            scale[terms.underlying[j]] += abs(terms.units[n, j])
         for k in range(schedules):
             out.components[k, :, :, n] = 0.0
             out.trades[k, n] = out.turnover[k, n] = 0.0
@@ -276,8 +284,8 @@ def replay_inceptions(first: int, last: int, terms: Terms, out: Results) -> None
                         target = -book[3, u] / weight
                     if terms.trades_at[k, offset + look]:
                         trade = target - held[k, u]
-                        held[k, u] = target
-                        if trade != 0.0:
+                        if abs(trade) > SMALLEST_TRADE * scale[u]:
+                            held[k, u] = target
                             size = abs(trade)
                             spread = terms.half_spread[u] * size * spot
                             commission = terms.per_unit[u] * size
