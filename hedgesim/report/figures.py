@@ -1,0 +1,288 @@
+"""Charts of variance, frequency and covariance shares; each draws into axes, its title names the finding."""
+
+import math
+from collections.abc import Sequence
+
+import numpy as np
+from matplotlib.axes import Axes
+from matplotlib.lines import Line2D
+from matplotlib.patches import Patch
+
+from hedgesim.market import Floats, Ints
+from hedgesim.report import style
+from hedgesim.report.sheet import HEIGHT_MM, text_width
+from hedgesim.report.view import View
+from hedgesim.study.money import money, percent
+
+_MOST_NAMES = 14
+
+
+def legend_below(axes: Axes, handles: Sequence[Line2D | Patch], *, columns: int, drop: float = 12.5) -> None:
+    """A legend `drop` millimetres under the frame."""
+    axes.legend(
+        handles=list(handles),
+        loc="upper center",
+        bbox_to_anchor=(0.5, -drop / (axes.get_position().height * HEIGHT_MM)),
+        ncols=columns,
+        columnspacing=1.4,
+        borderaxespad=0.0,
+    )
+
+
+def name_rows(axes: Axes, view: View, rows: Sequence[int], places: Floats | Ints) -> None:
+    """Schedule names at the left of rows, the chosen one in bold."""
+    axes.set_yticks(places, [style.clipped(view.names[r]) for r in rows])
+    for label, r in zip(axes.get_yticklabels(), rows, strict=True):
+        label.set_fontweight("bold" if r == view.best else "normal")
+
+
+def name_ticks(axes: Axes, view: View, rows: Sequence[int], width_mm: float) -> float:
+    """Schedule names under bars at 0..len(rows)-1, upright where there is no room; their depth in millimetres."""
+    per = width_mm / max(len(rows), 4)
+    labels = [style.clipped(view.names[r]) for r in rows]
+    widest = max(text_width(label, style.CHART, True) for label in labels)
+    upright = widest > per - 1.5
+    step = max(1, math.ceil(4.6 / per)) if upright else 1
+    shown = list(range(0, len(rows), step))
+    if view.best in rows:
+        # The chosen schedule keeps its name; a neighbour too close to it gives way.
+        place = list(rows).index(view.best)
+        shown = sorted({k for k in shown if abs(k - place) >= step} | {place})
+    axes.set_xticks(shown, [labels[k] for k in shown], rotation=90 if upright else 0)
+    for label, k in zip(axes.get_xticklabels(), shown, strict=True):
+        label.set_fontweight("bold" if rows[k] == view.best else "normal")
+    return 2.0 + (widest if upright else 3.5)
+
+
+def stack_title(view: View) -> str:
+    """The finding of the variance chart."""
+    best = view.best
+    name = view.names[best]
+    if math.isfinite(view.reference_gross):
+        ratio = view.gross[best] / view.reference_gross if view.reference_gross > 0 else math.nan
+        return f"Variance before costs under {name} is {ratio:.2f} times that of trading at every look"
+    part = style.share_with_error(view.share[best], view.share_se[best])
+    if len(view.names) == 1 or best == 0:
+        return f"Under {name} trading more would remove {part} of the variance before costs"
+    return (
+        f"Removable part of variance before costs: {part} under {name}, {percent(view.share[0])} under {view.names[0]}"
+    )
+
+
+def variance_stack(axes: Axes, view: View, *, currency: str, width_mm: float) -> None:
+    """Stacked bars of the floor, removable and cost parts of the variance; negative parts hang below zero."""
+    rows = view.pick(40)
+    replayed = math.isfinite(view.reference_gross)
+    floor = np.full(len(rows), view.reference_gross) if replayed else view.floor[rows]
+    parts = [
+        (
+            floor,
+            "reference" if replayed else "floor",
+            "gross, trading at every look" if replayed else "floor: no schedule removes it",
+        ),
+        (view.removable[rows], "removable", "removable by trading more" if not replayed else "gross beyond every look"),
+        (view.total[rows] - view.gross[rows], "costs", "costs and their covariance with gross"),
+    ]
+    x = np.arange(len(rows))
+    up, down = np.zeros(len(rows)), np.zeros(len(rows))
+    for values, key, _ in parts:
+        values = np.nan_to_num(values)
+        bottom = np.where(values >= 0, up, down)
+        axes.bar(x, values, 0.62, bottom=bottom, color=style.COMPONENT[key], edgecolor=style.PAPER, linewidth=0.4)
+        up, down = up + np.clip(values, 0, None), down + np.clip(values, None, 0)
+    axes.scatter(
+        x, view.total[rows], marker="_", s=150 if len(rows) < 20 else 40, color=style.INK, zorder=4, linewidths=1.6
+    )
+    spread = view.total_se[rows]
+    axes.errorbar(
+        x, view.total[rows], yerr=np.nan_to_num(spread), fmt="none", ecolor=style.INK, elinewidth=0.9, zorder=4
+    )
+    axes.axhline(0, color=style.QUIET, lw=0.7)
+    top = float(np.nanmax(np.concatenate([up, view.total[rows] + np.nan_to_num(spread)])))
+    low = float(min(down.min(), 0.0))
+    top = top if top > 0 else 1.0
+    if (
+        len(rows) <= _MOST_NAMES
+        and max(text_width(money(s), style.CHART) for s in view.std[rows]) < width_mm / len(rows) - 1
+    ):
+        for k, r in enumerate(rows):
+            if math.isfinite(view.std[r]):
+                y = max(up[k], view.total[r] + np.nan_to_num(spread[k]))
+                axes.annotate(
+                    money(view.std[r]),
+                    (k, y),
+                    (0, 4),
+                    textcoords="offset points",
+                    ha="center",
+                    fontsize=style.CHART,
+                    gid="annotation",
+                )
+        note = "above the bars: std of P&L"
+    else:
+        note = ""
+    axes.set_ylim(low * 1.08, low * 1.08 + (top - low * 1.08) * 1.12)
+    axes.set_xlim(-0.6, max(len(rows), 4) - 0.4)
+    scale, letter = style.unit_of(np.sqrt(np.array([top])))
+    style.plain_axis(axes.yaxis, scale**2)
+    axes.set_ylabel(f"variance of P&L, ({currency} {letter})\u00b2".replace(" )", ")"))
+    axes.set_xlabel("schedule, rare to frequent" + (f"; {note}" if note else ""))
+    deepest = name_ticks(axes, view, rows, width_mm)
+    handles: list[Line2D | Patch] = [Patch(color=style.COMPONENT[key], label=label) for _, key, label in parts]
+    handles.append(
+        Line2D([], [], color=style.INK, marker="_", ls="none", ms=9, mew=1.6, label="variance of P&L \u00b1 1 se")
+    )
+    legend_below(axes, handles, columns=2, drop=deepest + 8.0)
+
+
+def law_title(view: View) -> str:
+    """The finding of the frequency chart."""
+    if view.law is None:
+        return "No law is fitted to the removable variance"
+    power = f"N^-{view.law.exponent:.3f} \u00b1 {view.law.exponent_se:.3f}"
+    less = "" if math.isinf(view.law.reference) else ", less its value at every look"
+    return f"Removable variance falls like {power} in the hedge intervals N{less}"
+
+
+def frequency_law(axes: Axes, view: View, *, currency: str) -> None:
+    """Removable variance against the number of trades on log axes, with the fitted law and the asymptotic line."""
+    n, y, e = view.intervals, view.removable, np.nan_to_num(view.removable_se)
+    usable = np.isfinite(n) & np.isfinite(y) & (n > 0) & (y > 0)
+    hidden = int((np.isfinite(n) & np.isfinite(y) & ~usable).sum())
+    axes.set_xlabel("hedge intervals over the life, N")
+    scale, letter = style.unit_of(np.sqrt(np.abs(y[usable]))) if usable.any() else (1.0, "")
+    what = "gross less every-look variance" if math.isfinite(view.reference_gross) else "removable variance"
+    axes.set_ylabel(f"{what}, ({currency} {letter})\u00b2".replace(" )", ")"))
+    if not usable.any():
+        axes.text(
+            0.5,
+            0.5,
+            "no schedule has a positive\nremovable variance",
+            transform=axes.transAxes,
+            ha="center",
+            va="center",
+            gid="annotation",
+        )
+        axes.set_xticks([])
+        axes.set_yticks([])
+        return
+    axes.set_xscale("log")
+    axes.set_yscale("log")
+    unit = scale**2
+    for k in np.flatnonzero(usable):
+        below = min(e[k], y[k] * 0.9)
+        axes.errorbar(
+            n[k],
+            y[k] / unit,
+            yerr=[[below / unit], [e[k] / unit]],
+            fmt="o",
+            ms=8 if k == view.best else 5.5,
+            color=view.colours[k],
+            mfc=view.colours[k] if view.fitted[k] else style.PAPER,
+            mec=style.CHOSEN if k == view.best else view.colours[k],
+            mew=1.6,
+            elinewidth=1.1,
+            capsize=2,
+            zorder=3,
+        )
+    low_n, high_n = float(n[usable].min()) / 1.5, float(n[usable].max()) * 1.5
+    grid = np.geomspace(low_n, high_n, 60)
+    handles = []
+    if view.law is not None:
+        known = grid[grid < view.law.reference]
+        axes.plot(known, view.law.removable(known) / unit, color=style.INK, lw=1.1, zorder=2)
+        handles.append(Line2D([], [], color=style.INK, lw=1.1, label="fitted law"))
+    line = np.isfinite(view.asymptotic) & np.isfinite(n) & (view.asymptotic > 0)
+    if line.any():
+        first = int(np.flatnonzero(line)[0])
+        axes.plot(
+            grid,
+            view.asymptotic[first] * n[first] / grid / unit,
+            color=style.COMPONENT["costs"],
+            lw=1.2,
+            ls=(0, (5, 2)),
+            zorder=2,
+        )
+        handles.append(
+            Line2D(
+                [],
+                [],
+                color=style.COMPONENT["costs"],
+                lw=1.2,
+                ls=(0, (5, 2)),
+                label="asymptotic 1/N (quadratic variation)",
+            )
+        )
+    handles.append(
+        Line2D([], [], color=style.QUIET, marker="o", ls="none", mfc=style.QUIET, label="in the fit (\u00b1 1 se)")
+    )
+    if not all(view.fitted[k] for k in np.flatnonzero(usable)):
+        handles.append(
+            Line2D([], [], color=style.QUIET, marker="o", ls="none", mfc=style.PAPER, mew=1.6, label="beside the fit")
+        )
+    handles.append(
+        Line2D([], [], color=style.PAPER, marker="o", ls="none", mec=style.CHOSEN, mew=1.6, ms=8, label="chosen")
+    )
+    low_y = float((y[usable] - np.minimum(e[usable], 0.9 * y[usable])).min()) / unit / 1.6
+    high_y = float((y[usable] + e[usable]).max()) / unit * 1.6
+    axes.set_xlim(low_n, high_n)
+    axes.set_ylim(low_y, high_y)
+    style.log_axis(axes.xaxis, low_n, high_n)
+    style.log_axis(axes.yaxis, low_y, high_y)
+    axes.grid(color=style.HAIR, lw=0.4)
+    legend_below(axes, handles, columns=2)
+    if hidden:
+        axes.annotate(
+            f"{hidden} schedule{'s' if hidden > 1 else ''} at or below zero not shown",
+            (0.985, 0.97),
+            xycoords="axes fraction",
+            ha="right",
+            va="top",
+            fontsize=style.CHART,
+            color=style.QUIET,
+            gid="annotation",
+        )
+
+
+def shares_title(view: View) -> str:
+    """The finding of the covariance chart: the largest component under the chosen schedule."""
+    best, rows = view.best, view.book_shares
+    if not view.varied:
+        top = max(rows, key=lambda s: abs(s.mean[best]))
+        size = money(top.mean[best])
+        return f"One inception: {style.words(top.component)} is the largest part under {view.names[best]}, {size}"
+    top = max(rows, key=lambda s: abs(np.nan_to_num(s.share[best])))
+    part = percent(top.share[best])
+    return f"{style.start(style.words(top.component))} carries {part} of the variance of P&L under {view.names[best]}"
+
+
+def covariance_shares(axes: Axes, view: View, *, currency: str) -> None:
+    """A diverging bar by schedule: Cov(component, total) / Var(total); bars to the left are negative.
+
+    Where there is one outcome only, the amounts of the components instead.
+    """
+    rows = view.pick(max(int(axes.get_position().height * HEIGHT_MM / 4.2), 4))
+    parts = [(s.component, np.nan_to_num((s.share if view.varied else s.mean)[rows])) for s in view.book_shares]
+    largest = max((float(np.abs(values).max()) for _, values in parts), default=0.0)
+    parts = [(name, values) for name, values in parts if np.abs(values).max() > 5e-4 * largest]
+    y = np.arange(len(rows))[::-1]
+    right, left = np.zeros(len(rows)), np.zeros(len(rows))
+    for name, values in parts:
+        start = np.where(values >= 0, right, left)
+        colour = style.component_colour(name)
+        axes.barh(y, values, 0.66, left=start, color=colour, edgecolor=style.PAPER, linewidth=0.4)
+        right, left = right + np.clip(values, 0, None), left + np.clip(values, None, 0)
+    axes.axvline(0, color=style.INK, lw=0.9)
+    low, high = float(min(left.min(), 0.0)), float(max(right.max(), 1.0 if view.varied else 0.0))
+    axes.set_xlim(low - 0.03 * (high - low), high + 0.04 * (high - low))
+    axes.set_ylim(-0.7, max(len(rows), 4) - 0.3)
+    name_rows(axes, view, rows, y)
+    if view.varied:
+        axes.axvline(1, color=style.QUIET, lw=0.8, ls=(0, (2, 2)))
+        style.percent_axis(axes.xaxis)
+        axes.set_xlabel("Cov(component, P&L) / Var(P&L): parts add to 100 %, may be negative or exceed it")
+    else:
+        style.money_axis(axes.xaxis, np.array([low, high]))
+        axes.set_xlabel(f"P&L by component, {currency}")
+    handles = [Patch(color=style.component_colour(name), label=style.words(name)) for name, _ in parts]
+    if handles:
+        legend_below(axes, handles, columns=min(5, len(handles)))

@@ -1,0 +1,109 @@
+"""Pages that list: every schedule with its errors; market, book, method, versions and hashes."""
+
+import math
+
+from hedgesim.report import style
+from hedgesim.report.facts import CAUTION, RunFacts
+from hedgesim.report.sheet import BOTTOM_MM, MARGIN_MM, TEXT_WIDTH_MM, Column, Sheet, line_height, wrap
+from hedgesim.report.view import View, source_line
+from hedgesim.study.money import money, money_with_error
+
+GUTTER_MM = 12.0
+_ROW_MM = 5.4
+
+
+def new_sheet(view: View, facts: RunFacts, name: str, title: str) -> Sheet:
+    """An empty page of the pack."""
+    return Sheet(name, title, source_line(view, facts), facts.title)
+
+
+def root(variance: float) -> float:
+    """Standard deviation of a variance; nan for one estimated below zero."""
+    return math.sqrt(variance) if variance >= 0 else math.nan
+
+
+def count(value: float) -> str:
+    """A number of trades."""
+    return f"{value:,.0f}" if math.isfinite(value) else "n/a"
+
+
+def schedule_tables(view: View, facts: RunFacts) -> list[Sheet]:
+    """Every schedule with its errors, as many pages as it takes."""
+    sheets = []
+    per = int((BOTTOM_MM - 45) / _ROW_MM)
+    n = len(view.names)
+    for start in range(0, n, per):
+        rows = range(start, min(start + per, n))
+        span = f" ({start + 1} to {start + len(rows)} of {n})" if n > per else ""
+        sheet = new_sheet(
+            view,
+            facts,
+            "",
+            f"All schedules, rare to frequent{span}: amounts per life in {facts.currency}, \u00b1 1 se",
+        )
+        columns = [
+            Column("schedule", [view.names[r] for r in rows], "left"),
+            Column("trades", [count(view.trades[r]) for r in rows]),
+            Column("mean P&L", [money_with_error(view.mean[r], view.mean_se[r]) for r in rows]),
+            Column(view.cost_name, [money_with_error(view.cost[r], view.cost_se[r]) for r in rows]),
+            Column("std", [money_with_error(view.std[r], view.std_se[r]) for r in rows]),
+            Column("p01", [money(view.p01[r]) for r in rows]),
+            Column("p05", [money(view.p05[r]) for r in rows]),
+            Column("ES 97.5 %", [money_with_error(view.es975[r], view.es975_se[r]) for r in rows]),
+            Column("std gross", [money(root(view.gross[r])) for r in rows]),
+            Column("std floor", [money(root(view.floor[r])) for r in rows]),
+            Column("removable", [style.share_with_error(view.share[r], view.share_se[r]) for r in rows]),
+        ]
+        sheet.table(
+            MARGIN_MM,
+            sheet.top,
+            TEXT_WIDTH_MM,
+            columns,
+            size=9.0,
+            strong=[k for k, r in enumerate(rows) if r == view.best],
+        )
+        sheets.append(sheet)
+    return sheets
+
+
+def inputs(view: View, facts: RunFacts) -> list[Sheet]:
+    """Market, book, method, versions, seed and hashes in two columns, as many pages as it takes."""
+    seed = "none drawn" if facts.seed is None else str(facts.seed)
+    blocks = [
+        ("Market", facts.market_lines),
+        ("Book", facts.book_lines),
+        ("Method", facts.method_lines),
+        ("Sample", (source_line(view, facts), f"seed: {seed}")),
+        ("Cautions", (CAUTION, *facts.cautions, *view.warnings)),
+        ("Versions", tuple(f"{k} {v}" for k, v in facts.versions.items())),
+        ("Hashes", tuple(f"{k}: {v}" for k, v in facts.hashes.items())),
+    ]
+    half = (TEXT_WIDTH_MM - GUTTER_MM) / 2
+    lines: list[tuple[str, bool]] = []
+    for heading, body in blocks:
+        if body:
+            lines.append((heading, True))
+            for entry in body:
+                lines += [(part, False) for part in wrap(entry, half, 9.0)]
+            lines.append(("", False))
+    sheets: list[Sheet] = []
+    step, column, y = line_height(9.0), 2, 0.0
+    for k, (text, is_heading) in enumerate(lines):
+        needs = step * (2 if is_heading and k + 1 < len(lines) else 1)
+        if column == 2 or y + needs > BOTTOM_MM:
+            column = (column + 1) % 2 if column != 2 else 0
+            if column == 0:
+                sheets.append(
+                    new_sheet(view, facts, "", "Inputs, method and versions" + (", continued" if sheets else ""))
+                )
+            y = sheets[-1].top
+        sheets[-1].text(
+            MARGIN_MM + column * (half + GUTTER_MM),
+            y,
+            text,
+            size=9.0,
+            bold=is_heading,
+            colour=style.ACCENT if is_heading else style.INK,
+        )
+        y += step
+    return sheets

@@ -1,0 +1,323 @@
+"""The pages of the pack, in reading order; each builds its sheets from a view of the study and the facts of the run."""
+
+import math
+from collections.abc import Sequence
+
+import numpy as np
+
+from hedgesim.report import figures, outcomes, style, tradeoff
+from hedgesim.report.facts import CAUTION, RunFacts
+from hedgesim.report.listings import GUTTER_MM, count, inputs, new_sheet, root, schedule_tables
+from hedgesim.report.sheet import BOTTOM_MM, MARGIN_MM, TEXT_WIDTH_MM, Column, Sheet, line_height, wrap
+from hedgesim.report.view import View, mark_of
+from hedgesim.study.money import money, money_with_error, percent
+
+_FIRST_PAGE_ROWS = 12
+
+
+def finding(view: View, facts: RunFacts) -> list[Sheet]:
+    """The one sentence, the key table, what the cost of risk means, and the cautions."""
+    sheet = new_sheet(view, facts, "finding", view.sentence)
+    rows = _closest(view, _FIRST_PAGE_ROWS)
+    cautions = (CAUTION, *facts.cautions, *view.warnings)
+    small = style.BODY - 0.5
+    lines = [wrap(f"- {text}", TEXT_WIDTH_MM, small) for text in cautions]
+    kept, used = 0, 0.0
+    for block in lines:
+        if kept and used + len(block) * line_height(small) > 42:
+            break
+        used += len(block) * line_height(small)
+        kept += 1
+    top_of_cautions = BOTTOM_MM - used - 8
+    table_width = 196.0
+    below = sheet.table(
+        MARGIN_MM,
+        sheet.top,
+        table_width,
+        key_columns(view, rows),
+        strong=[k for k, r in enumerate(rows) if r == view.best],
+    )
+    if len(rows) < len(view.names):
+        note = f"{len(rows)} of {len(view.names)} schedules, those nearest the best; all of them on the table pages."
+        sheet.text(MARGIN_MM, below + 1.5, note, size=9.0, colour=style.QUIET, width=table_width)
+    left = MARGIN_MM + table_width + GUTTER_MM
+    width = TEXT_WIDTH_MM - table_width - GUTTER_MM
+    y = sheet.top
+    for heading, body in _reading(view):
+        y = sheet.text(left, y, heading, bold=True, colour=style.ACCENT, width=width)
+        y = sheet.text(left, y, body, size=9.0, width=width) + 2.5
+    if np.isfinite(view.objective[rows]).all() and top_of_cautions - below > 58.0:
+        axes = sheet.chart(
+            MARGIN_MM, below + 7, table_width, top_of_cautions - 4, tradeoff.objective_title(view), pad=(17, 25)
+        )
+        tradeoff.objective_bars(axes, view, rows, currency=facts.currency, width_mm=table_width - 17)
+    y = max(top_of_cautions, below + 6)
+    sheet.rule(MARGIN_MM, y - 1.5, TEXT_WIDTH_MM, colour=style.ACCENT)
+    y = sheet.text(MARGIN_MM, y, "Cautions", bold=True, colour=style.ACCENT)
+    for k, text in enumerate(cautions[:kept]):
+        last = k == kept - 1 and kept < len(cautions)
+        y = sheet.text(
+            MARGIN_MM, y, f"- {text}" + (" (more on the inputs pages)" if last else ""), size=small, width=TEXT_WIDTH_MM
+        )
+    return [sheet]
+
+
+def _closest(view: View, most: int) -> list[int]:
+    """The schedules nearest the best by objective, in order of frequency."""
+    if len(view.names) <= most:
+        return list(range(len(view.names)))
+    distance = np.where(np.isfinite(view.objective), view.objective, np.inf)
+    distance = np.where(np.arange(len(distance)) == view.best, -np.inf, distance)
+    return sorted(int(k) for k in np.argsort(distance, kind="stable")[:most])
+
+
+def _reading(view: View) -> list[tuple[str, str]]:
+    parts = [("What the cost of risk says", view.cost_of_risk_words)]
+    ties = [view.names[k] for k in range(len(view.names)) if view.tied[k] and k != view.best]
+    if ties:
+        shown = ", ".join(ties[:6]) + (f" and {len(ties) - 6} more" if len(ties) > 6 else "")
+        parts.append(
+            (
+                "How sure",
+                f"At {percent(view.confidence)} confidence the data cannot tell {view.names[view.best]} from {shown}.",
+            )
+        )
+    elif len(view.names) > 1 and np.isfinite(view.objective_se).any():
+        parts.append(("How sure", f"At {percent(view.confidence)} confidence no other schedule is as good."))
+    if view.law is not None:
+        parts.append(("Law", figures.law_title(view) + "."))
+    elif view.varied:
+        parts.append(("Law", style.clipped(view.law_note, 220)))
+    else:
+        parts.append(("One inception", "One outcome per schedule: no variance, no errors and no law."))
+    return parts
+
+
+def key_columns(view: View, rows: Sequence[int]) -> list[Column]:
+    """The columns that a decision needs."""
+    amount = money if view.risk_name != "variance" else _large
+    return [
+        Column("schedule", [view.names[r] for r in rows], "left"),
+        Column("trades", [count(view.trades[r]) for r in rows]),
+        Column(view.cost_name.replace(" ", "\n", 1), [money(view.cost[r]) for r in rows]),
+        Column("std of P&L\n\u00b1 1 se", [money_with_error(view.std[r], view.std_se[r]) for r in rows]),
+        Column("ES\n97.5 %", [money(view.es975[r]) for r in rows]),
+        Column("removable\nshare", [style.share_with_error(view.share[r], view.share_se[r]) for r in rows]),
+        Column("objective", [amount(view.objective[r]) for r in rows]),
+        Column("", [mark_of(view, r) for r in rows], "left"),
+    ]
+
+
+def _large(value: float) -> str:
+    return f"{value:.3g}"
+
+
+def variance(view: View, facts: RunFacts) -> list[Sheet]:
+    """Variance against the rebalancing interval, beside the frequency law."""
+    if not view.varied:
+        return []
+    half = (TEXT_WIDTH_MM - GUTTER_MM) / 2
+    title = "What trading more removes, and what it cannot"
+    if facts.replayed:
+        title = (
+            "What trading more removes: on a price history the floor is unknown, the reference is trading at every look"
+        )
+    sheet = new_sheet(view, facts, "variance", title)
+    axes = sheet.chart(MARGIN_MM, sheet.top, half, BOTTOM_MM, figures.stack_title(view), pad=(17, 44))
+    figures.variance_stack(axes, view, currency=facts.currency, width_mm=half - 17)
+    left = MARGIN_MM + half + GUTTER_MM
+    axes = sheet.chart(left, sheet.top, half, BOTTOM_MM, figures.law_title(view), pad=(17, 44))
+    figures.frequency_law(axes, view, currency=facts.currency)
+    note = view.law_note
+    if math.isfinite(view.below_look):
+        unseen = money(root(view.below_look), currency=facts.currency)
+        note += f" Below the look an estimated std of {unseen} stays unseen."
+    if note:
+        sheet.text(left, BOTTOM_MM - 15.0, style.clipped(note, 300), size=9.0, width=half, colour=style.QUIET)
+    return [sheet]
+
+
+def shares(view: View, facts: RunFacts) -> list[Sheet]:
+    """Covariance shares by schedule, and the breakdown of the chosen schedule by underlying."""
+    sheet = new_sheet(
+        view, facts, "shares", "Where the variance of P&L comes from" if view.varied else "Where the P&L comes from"
+    )
+    by_underlying = [s for s in view.shares if s.underlying != "all" and np.isfinite(s.mean[view.best])]
+    names = list(dict.fromkeys(s.underlying for s in view.shares if s.underlying != "all"))
+    table_width = 104.0
+    width = TEXT_WIDTH_MM - table_width - GUTTER_MM
+    axes = sheet.chart(MARGIN_MM, sheet.top, width, BOTTOM_MM, figures.shares_title(view), pad=(30, 26))
+    figures.covariance_shares(axes, view, currency=facts.currency)
+    left = MARGIN_MM + width + GUTTER_MM
+    heading = f"{view.names[view.best]}: mean, spread and share of each component"
+    y = sheet.text(left, sheet.top, heading, size=style.CHART_TITLE, bold=True, width=table_width) + 1.5
+    y = sheet.table(
+        left,
+        y,
+        table_width,
+        _share_columns([s for s in view.shares if s.underlying == "all"], view.best),
+        size=9.0,
+        row_height=5.0,
+    )
+    room = int((BOTTOM_MM - y - 22) / 5.0)
+    if len(names) > 1 and room > 2:
+        rows = [s for s in by_underlying if "." not in s.component and (s.mean[view.best] != 0 or s.std[view.best] > 0)]
+        totals = [s for s in rows if s.component == "total"]
+        shown = rows if len(rows) <= room else totals[:room]
+        y = sheet.text(left, y + 4, "The same by underlying", size=style.CHART_TITLE, bold=True) + 1.0
+        sheet.table(
+            left,
+            y,
+            table_width,
+            [Column("underlying", [s.underlying for s in shown], "left"), *_share_columns(shown, view.best)],
+            size=9.0,
+            row_height=5.0,
+        )
+    return [sheet]
+
+
+def _share_columns(rows: Sequence, best: int) -> list[Column]:  # type: ignore[type-arg]
+    return [
+        Column("component", [style.words(s.component) for s in rows], "left"),
+        Column("mean \u00b1 1 se", [money_with_error(s.mean[best], s.mean_se[best]) for s in rows]),
+        Column("std", [money(s.std[best]) for s in rows]),
+        Column("share", [percent(s.share[best]) for s in rows]),
+    ]
+
+
+def distribution(view: View, facts: RunFacts) -> list[Sheet]:
+    """P&L densities and their loss tails."""
+    half = (TEXT_WIDTH_MM - GUTTER_MM) / 2
+    currency, totals = facts.currency, facts.ledger.totals
+    sheet = new_sheet(view, facts, "distribution", "How a life can end")
+    axes = sheet.chart(MARGIN_MM, sheet.top, half, BOTTOM_MM, outcomes.ridge_title(view, currency), pad=(28, 30))
+    outcomes.ridges(axes, view, totals, currency=currency)
+    axes = sheet.chart(
+        MARGIN_MM + half + GUTTER_MM,
+        sheet.top,
+        half,
+        BOTTOM_MM,
+        outcomes.exceedance_title(view, currency),
+        pad=(19, 30),
+    )
+    outcomes.exceedance(axes, view, totals, currency=currency)
+    return [sheet]
+
+
+def price_of_risk(view: View, facts: RunFacts) -> list[Sheet]:
+    """Cost against risk, and the price list of the efficient schedules."""
+    if not view.varied:
+        return []
+    table_width = 118.0
+    width = TEXT_WIDTH_MM - table_width - GUTTER_MM
+    sheet = new_sheet(view, facts, "cost_and_risk", "What a schedule costs against the risk it leaves")
+    axes = sheet.chart(
+        MARGIN_MM, sheet.top, width, BOTTOM_MM, tradeoff.cost_risk_title(view, facts.currency), pad=(19, 30)
+    )
+    tradeoff.cost_risk(axes, view, currency=facts.currency)
+    left = MARGIN_MM + width + GUTTER_MM
+    y = (
+        sheet.text(
+            left,
+            sheet.top,
+            "Price list: cost of the next unit of risk removed",
+            size=style.CHART_TITLE,
+            bold=True,
+            width=table_width,
+        )
+        + 1.5
+    )
+    steps = view.steps[:20]
+    columns = [
+        Column("schedule", [s.schedule for s in steps], "left"),
+        Column("next finer", [s.finer for s in steps], "left"),
+        Column("extra cost per\nunit of risk removed", [_with_error(s.price, s.price_se) for s in steps]),
+        Column("best for a cost\nof risk in", [_range(s.best_from, s.best_to) for s in steps]),
+    ]
+    y = sheet.table(
+        left,
+        y,
+        table_width,
+        columns,
+        size=9.0,
+        strong=[k for k, s in enumerate(steps) if s.schedule == view.names[view.best]],
+        row_height=5.0,
+    )
+    if len(view.steps) > len(steps):
+        y = sheet.text(
+            left, y + 1, f"{len(steps)} of {len(view.steps)} efficient schedules", size=9.0, colour=style.QUIET
+        )
+    sheet.text(left, y + 3, view.cost_of_risk_words, size=9.0, width=table_width)
+    return [sheet]
+
+
+def _with_error(value: float, error: float) -> str:
+    if not math.isfinite(value):
+        return ""
+    return f"{value:.3g} \u00b1 {error:.1g}" if math.isfinite(error) else f"{value:.3g}"
+
+
+def _range(low: float, high: float) -> str:
+    if not (math.isfinite(low) or math.isfinite(high)):
+        return "never"
+    return f"{low:.3g} to {high:.3g}" if math.isfinite(high) else f"above {low:.3g}"
+
+
+def history(view: View, facts: RunFacts) -> list[Sheet]:
+    """P&L of each inception over the price history."""
+    totals = facts.ledger.totals
+    if not facts.replayed or totals.shape[1] < 2:
+        return []
+    sheet = new_sheet(view, facts, "rolling", "The same book started again and again on the price history")
+    axes = sheet.chart(
+        MARGIN_MM,
+        sheet.top,
+        TEXT_WIDTH_MM,
+        BOTTOM_MM,
+        outcomes.rolling_title(view, totals, facts.currency),
+        pad=(19, 26),
+    )
+    outcomes.rolling(axes, view, totals, facts.inceptions, currency=facts.currency)
+    return [sheet]
+
+
+def stories(view: View, facts: RunFacts) -> list[Sheet]:
+    """One ordinary and one bad path, a page each."""
+    sheets = []
+    half = (TEXT_WIDTH_MM - GUTTER_MM) / 2
+    names = facts.ledger.underlyings
+    for k, story in enumerate(facts.stories):
+        marks = facts.marks[k] if k < len(facts.marks) else ()
+        sheet = new_sheet(view, facts, f"path_{k + 1}", outcomes.story_title(story, facts.currency))
+        middle = sheet.top + (BOTTOM_MM - sheet.top) * 0.45
+        faint = " (faint: strikes until expiry, expiries dotted)" if marks else ""
+        price = sheet.chart(MARGIN_MM, sheet.top, half, middle, f"Price of path {story.path}{faint}", pad=(19, 3))
+        outcomes.story_price(price, story, marks, names, currency=facts.currency)
+        gap = float(np.abs(story.hedge - story.target).sum(axis=0).max())
+        hedge = sheet.chart(
+            MARGIN_MM,
+            middle + 2,
+            half,
+            BOTTOM_MM,
+            f"The hedge is at most {money(gap)} units from the reference delta",
+            pad=(19, 30),
+        )
+        outcomes.story_hedge(hedge, story, names)
+        end = float(story.components["total"][-1]) if "total" in story.components else math.nan
+        pnl = sheet.chart(
+            MARGIN_MM + half + GUTTER_MM,
+            sheet.top,
+            half,
+            BOTTOM_MM,
+            f"P&L by component adds up to {money(end, currency=facts.currency)}",
+            pad=(19, 30),
+        )
+        outcomes.story_pnl(pnl, story, currency=facts.currency)
+        sheets.append(sheet)
+    return sheets
+
+
+def all_pages(view: View, facts: RunFacts) -> list[Sheet]:
+    """The whole pack in reading order."""
+    makers = (finding, price_of_risk, variance, shares, distribution, history, stories, schedule_tables, inputs)
+    return [sheet for make in makers for sheet in make(view, facts)]
