@@ -2,16 +2,13 @@
 
 import csv
 import io
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 from hedgesim.errors import Problem
 from hedgesim.experiment.fields import nearest, unknown_key
 from hedgesim.experiment.values import BadValueError, parse_scalar, shown
-
-MOST_BYTES = 64 * 1024 * 1024
 
 
 @dataclass(frozen=True)
@@ -39,13 +36,13 @@ class BookFile:
     problems: Sequence[Problem]
 
 
-def read_book(path: Path, *, shown_as: str, columns: Mapping[str, str], required: Sequence[str]) -> BookFile:
+def read_book(data: bytes, *, shown_as: str, columns: Mapping[str, str], required: Sequence[str]) -> BookFile:
     """Read a CSV book.
 
     Parameters
     ----------
-    path : Path
-        The file: UTF-8, a line of column names, then a row a position; blank lines are skipped.
+    data : bytes
+        The file's content: UTF-8, a line of column names, then a row a position; blank lines are skipped.
     shown_as : str
         The file as named in messages.
     columns : mapping of str to str
@@ -66,14 +63,6 @@ def read_book(path: Path, *, shown_as: str, columns: Mapping[str, str], required
     def result(rows: Sequence[dict[str, Any]] = (), lines: Sequence[int] = (), without: Sequence[str] = ()) -> BookFile:
         return BookFile(shown_as, rows, lines, frozenset(without), problems)
 
-    try:
-        data = path.read_bytes()
-    except OSError as error:
-        wrong(None, "", f"cannot be read ({(error.strerror or str(error)).lower()})", "name a CSV file of positions")
-        return result()
-    if len(data) > MOST_BYTES:
-        wrong(None, "", f"larger than {MOST_BYTES // 2**20} MB", "split the book")
-        return result()
     try:
         content = data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
@@ -101,7 +90,8 @@ def read_book(path: Path, *, shown_as: str, columns: Mapping[str, str], required
             for name, cell in zip(header, cells, strict=False):
                 if name in columns and name not in row and cell:
                     try:
-                        row[name] = parse_scalar(cell)
+                        # A name of digits stays a name: a cell cannot say by quotes that it is text.
+                        row[name] = cell if name == "underlying" else parse_scalar(cell)
                     except BadValueError as bad:
                         wrong(start, name, bad.message, bad.advice)
             rows.append(row)
@@ -117,7 +107,11 @@ def read_book(path: Path, *, shown_as: str, columns: Mapping[str, str], required
 
 
 def _check_header(
-    header: Sequence[str], line: int, columns: Mapping[str, str], required: Sequence[str], wrong: Any
+    header: Sequence[str],
+    line: int,
+    columns: Mapping[str, str],
+    required: Sequence[str],
+    wrong: Callable[[int | None, str, str, str], None],
 ) -> list[str]:
     meant = set()
     for i, name in enumerate(header):
@@ -125,7 +119,7 @@ def _check_header(
             wrong(line, "", f"column {i + 1} has no name", "name it, or remove it")
         elif name not in columns:
             message, advice = unknown_key(name, list(columns))
-            wrong(line, name, message.replace("unknown key", "unknown column").strip(), advice)
+            wrong(line, name, message.replace("key", "column", 1), advice.replace("keys here", "columns", 1))
             meant.add(nearest(name, columns))
         elif name in header[:i]:
             wrong(line, name, f"column {shown(name)} twice", "keep one of the two")

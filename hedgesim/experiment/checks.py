@@ -62,7 +62,7 @@ def _names(parts: Parts) -> Iterator[Fault]:
     used: set[str | None] = set()
     for i, row in enumerate(rows if isinstance(rows, list | tuple) else ()):
         name = get(row, "underlying")
-        if name is None and parts.names:
+        if name is None and len(parts.names) > 1:
             yield Fault(("book", i, "underlying"), "missing", f"write one of {', '.join(parts.names)}")
         elif isinstance(name, str) and name not in parts.names:
             yield Fault(("book", i, "underlying"), *unknown_name(name, parts.names))
@@ -98,6 +98,11 @@ def _named(path: tuple[str, ...], given: object, names: tuple[str, ...], *, ever
 
 def _underlyings(parts: Parts) -> Iterator[Fault]:
     series = parts.paths.series if parts.paths is not None and parts.paths.source == "prices" else {}
+    marked = {
+        name if name in parts.names else nearest(name, parts.names)
+        for name, columns in series.items()
+        if columns.mark_vol is not None
+    }
     for name, underlying in parts.underlyings.items():
         if underlying is None:
             continue
@@ -106,11 +111,10 @@ def _underlyings(parts: Parts) -> Iterator[Fault]:
             yield Fault((*path, "spot"), "missing", "price at inception, in currency")
         if parts.source == "prices" and underlying.spot is not None:
             yield Fault((*path, "spot"), "given with source prices", "delete it: the price file has the spot")
-        marks = name in series and series[name].mark_vol is not None
-        if marks and underlying.mark_vol is not None:
+        if name in marked and underlying.mark_vol is not None:
             yield Fault((*path, "mark_vol"), f"given here and as paths.series.{name}.mark_vol", "keep one of the two")
         unmarked = any(p is not None and p.underlying == name and p.mark_vol is None for p in parts.book)
-        if unmarked and underlying.mark_vol is None and not marks and parts.paths is not None:
+        if unmarked and underlying.mark_vol is None and name not in marked and parts.paths is not None:
             yield Fault((*path, "mark_vol"), "missing", "the vol that values its options; or give every position one")
 
 

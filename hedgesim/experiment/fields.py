@@ -240,12 +240,15 @@ def number(
     """
     low, high = (above if above is not None else least), (below if below is not None else most)
 
+    def written(bound: float) -> str:
+        return str(bound) if isinstance(bound, int) else values.shortest(bound)
+
     def words() -> str:
         parts = []
         if low is not None:
-            parts.append(f"{'above' if above is not None else 'of at least'} {values.shortest(low)}")
+            parts.append(f"{'above' if above is not None else 'of at least'} {written(low)}")
         if high is not None:
-            parts.append(f"{'below' if below is not None else 'at most'} {values.shortest(high)}")
+            parts.append(f"{'below' if below is not None else 'at most'} {written(high)}")
         return " and ".join(parts)
 
     def inside(x: float) -> bool:
@@ -268,9 +271,9 @@ def number(
             raise BadValueError("0 is not accepted", "write a number other than 0")
         if inside(x):
             return x
-        unit = "bp" if such_as.endswith("bp") else "%"
-        if percent and not isinstance(value, str) and inside(x / (100 if unit == "%" else 10_000)):
-            raise BadValueError(f"{shown(value)} looks like a percentage", f"write {shown(value)}{unit}")
+        unit, per_one, name = ("bp", 10_000, "basis points") if such_as.endswith("bp") else ("%", 100, "a percentage")
+        if percent and not isinstance(value, str) and abs(x) > 1 and inside(x / per_one):
+            raise BadValueError(f"{shown(value)} looks like {name}", f"write {shown(value)}{unit}")
         as_written = value if isinstance(value, str) else shown(value)
         example = f", such as {such_as}" if percent else ""
         kind = "whole number" if whole else "number"

@@ -16,7 +16,7 @@ from hedgesim.experiment.nodes import KeyPath, Place, Tree, compose, write
 from hedgesim.experiment.schema import Experiment, Position
 from hedgesim.experiment.values import shown
 
-MOST_BYTES = 16 * 1024 * 1024
+MOST_BYTES = 64 * 1024 * 1024
 
 
 @dataclass(frozen=True)
@@ -151,6 +151,16 @@ def _plain(value: Any) -> Any:
     return str(value)
 
 
+def _content(path: Path) -> tuple[bytes, str]:
+    """Read a file, or say why it cannot be read."""
+    try:
+        if path.stat().st_size > MOST_BYTES:
+            return b"", f"is larger than {MOST_BYTES // 2**20} MB"
+        return path.read_bytes(), ""
+    except OSError as error:
+        return b"", f"cannot be read ({(error.strerror or str(error)).lower()})"
+
+
 class _Reading:
     """The state of one reading: data, places and problems so far."""
 
@@ -160,7 +170,10 @@ class _Reading:
         self.spoilt: set[KeyPath] = set()
         self.book: BookFile | None = None
         self.hash = hashlib.sha256()
-        tree = self._compose(self._bytes())
+        content, reason = _content(self.path)
+        if reason:
+            raise ExperimentError([Problem(self.file, None, None, "", reason, "name an experiment file")])
+        tree = self._compose(content)
         self.data: Any = tree.data
         self.places, self.keys = dict(tree.places), dict(tree.keys)
         self._take(tree)
@@ -173,17 +186,6 @@ class _Reading:
             self.hash.update(b"\0set\0" + override.encode())
             self._override(override)
         self._inline_book()
-
-    def _bytes(self) -> bytes:
-        try:
-            size = self.path.stat().st_size
-            if size > MOST_BYTES:
-                message = f"larger than {MOST_BYTES // 2**20} MB"
-                raise ExperimentError([Problem(self.file, None, None, "", message, "keep the book in a CSV file")])
-            return self.path.read_bytes()
-        except OSError as error:
-            reason = f"cannot be read ({(error.strerror or str(error)).lower()})"
-            raise ExperimentError([Problem(self.file, None, None, "", reason, "name an experiment file")]) from None
 
     def _compose(self, content: bytes) -> Tree:
         self.hash.update(content)
@@ -223,7 +225,7 @@ class _Reading:
             self.keys.pop(old, None)
         self.spoilt = {p for p in self.spoilt if p[: len(path)] != path}
         container[key] = tree.data
-        self.places.update({(*path, *below): place for below in tree.places})
+        self.places.update({(*path, *below): place for below in tree.places} | {path: place})
         self.keys.update({(*path, *below): place for below in tree.keys} | {path: place})
         self._take(tree, path)
 
@@ -260,9 +262,15 @@ class _Reading:
             return
         file = self.path.parent / named
         known = {name: described(Position, name) for name in field_names(Position)}
-        book = read_book(file, shown_as=str(file), columns=known, required=("type", "strike", "expiry"))
-        if file.is_file():
-            self.hash.update(b"\0book\0" + file.read_bytes())
+        content, reason = _content(file)
+        if reason:
+            wrong = Source(self.file, self.places, self.keys).problem(("book",), f"{file} {reason}", "name a CSV file")
+            self.problems.append(wrong)
+            self.spoilt.add(("book",))
+            self.data["book"] = []
+            return
+        self.hash.update(b"\0book\0" + content)
+        book = read_book(content, shown_as=str(file), columns=known, required=("type", "strike", "expiry"))
         self.book = book
         self.problems.extend(book.problems)
         self.data["book"] = list(book.rows)

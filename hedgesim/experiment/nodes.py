@@ -182,7 +182,7 @@ def _in_words(error: yaml.MarkedYAMLError) -> tuple[str, str]:
     if "'\\t'" in problem:
         return "a tab where spaces are needed", "indent with spaces"
     if "mapping values are not allowed" in problem:
-        return "a second ': ' on the line", "put the text in quotes, or write one key a line"
+        return "a ': ' where no key can stand", "line keys up, write one a line, and put text with a colon in quotes"
     context = f" {error.context}" if error.context else ""
     return f"{problem}{context}", "check indentation, brackets, quotes and the colon after each key"
 

@@ -360,7 +360,7 @@ class Experiment(Section):
     def prepared(cls, data: Mapping[str, Any]) -> Mapping[str, Any]:
         """Put the only underlying into positions that name none."""
         names, book = checks.names_in(data), data.get("book")
-        if len(names) != 1 or not isinstance(book, list | tuple):
+        if len(names) != 1 or not isinstance(book, list | tuple) or _valid(NAME.read, names[0]) is None:
             return data
         return {**data, "book": [_on(row, names[0]) for row in book]}
 
