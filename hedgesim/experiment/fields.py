@@ -203,7 +203,11 @@ class Read:
 
     def __get_pydantic_core_schema__(self, source: Any, handler: GetCoreSchemaHandler) -> CoreSchema:
         """Validate by `read` alone."""
-        return core_schema.no_info_plain_validator_function(self)
+        # Durations, strikes and dates are written as text; pydantic would write out their attributes.
+        as_written = core_schema.plain_serializer_function_ser_schema(
+            lambda value: value if isinstance(value, int | float | str | dict | tuple) else str(value)
+        )
+        return core_schema.no_info_plain_validator_function(self, serialization=as_written)
 
     def __get_pydantic_json_schema__(self, schema: CoreSchema, handler: GetJsonSchemaHandler) -> dict[str, Any]:
         """Give the JSON schema of what `read` accepts."""
@@ -324,14 +328,19 @@ def text(*, most: int = 200, pattern: str = "", advice: str = "") -> Read:
             raise BadValueError(f"{shown(value)} is not accepted", advice)
         return value
 
-    return Read(read, {"type": "string", "minLength": 1, "maxLength": most} | ({"pattern": pattern} if pattern else {}))
+    return Read(
+        read,
+        {"type": "string", "minLength": 1, "maxLength": most} | ({"pattern": f"^(?:{pattern})$"} if pattern else {}),
+    )
 
 
-NAME = text(
+_NAME_TEXT = text(
     most=64,
     pattern=r"(?!all$)[^\W_][\w.&/-]*",
     advice="write letters, digits and . & / - _, beginning with a letter or digit; 'all' is taken",
 )
+# Without the pattern, so that editors take any name as a key of a mapping of underlyings.
+NAME = Read(_NAME_TEXT.read, {"type": "string", "minLength": 1, "maxLength": 64})
 
 
 @dataclass(frozen=True, eq=False)

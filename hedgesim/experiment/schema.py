@@ -209,7 +209,7 @@ class Position(Section):
 class GbmPaths(Section):
     """Simulated prices: geometric Brownian motion."""
 
-    source: Literal["gbm"] = Field(default="gbm", description="gbm or prices")
+    source: Literal["gbm"] = Field(description="gbm or prices")
     realised_vol: Annotated[float | dict[str, float], _vols] = Field(
         description="vol that the price then has, a year; one value or a value for each underlying"
     )
@@ -291,7 +291,7 @@ def _read_inceptions(value: Any) -> Inceptions | str:
 class PricePaths(Section):
     """Prices from a file."""
 
-    source: Literal["prices"] = Field(default="prices", description="gbm or prices")
+    source: Literal["prices"] = Field(description="gbm or prices")
     file: _Text = Field(description="CSV file of prices, relative to the experiment file")
     time: Annotated[TimeColumn, BeforeValidator(_as_column), OrJson(_COLUMN_JSON)] = Field(
         description="name of the column with dates or timestamps, or {column: week, unit: 1/52}"

@@ -122,7 +122,7 @@ def parse_number(value: object) -> float:
         number = math.inf
     if not math.isfinite(number):
         raise BadValueError("not a finite number", "write a number below 1e308 in size")
-    return number
+    return number + 0.0  # no negative zero: it would be written as 0 and read back as another number
 
 
 def parse_fraction(value: object) -> float:
