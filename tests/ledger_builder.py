@@ -23,13 +23,16 @@ def build_ledger(
     engine="simulate",
     below_look=float("nan"),
 ):
-    """Ledger from `detail` (schedule, underlying, component, path); bootstrap when `resamples` (resample, path) is given."""
+    """Ledger from `detail` (schedule, underlying, component, path); bootstrap when `resamples` (resample, path) is given.
+
+    `groups` of zero leaves the ledger without resamples.
+    """
     s, u, c, n = detail.shape
     flat = detail.reshape(s, u * c, n)
     if resamples is None:
         cut = np.arange(n) * groups // n
         pairs = [_moments(flat[:, :, cut != g]) for g in range(groups)]
-        factor, kind = (groups - 1) / groups, "jackknife"
+        factor, kind = (groups - 1) / max(groups, 1), "jackknife"
     else:
         pairs = [_moments(flat[:, :, pick]) for pick in resamples]
         factor, kind = 1.0 / (len(resamples) - 1), "bootstrap"
@@ -42,7 +45,12 @@ def build_ledger(
         components=tuple(components),
         count=n,
         moments=Moments(frozen(mean), frozen(cov)),
-        replicates=Replicates(frozen([p[0] for p in pairs]), frozen([p[1] for p in pairs]), factor, kind),
+        replicates=Replicates(
+            frozen(np.array([p[0] for p in pairs]).reshape(-1, *mean.shape)),
+            frozen(np.array([p[1] for p in pairs]).reshape(-1, *cov.shape)),
+            factor,
+            kind,
+        ),
         totals=frozen(flat.sum(axis=1)),
         trades=frozen(np.arange(s) + 2.0),
         turnover=frozen(zeros + 1000.0),
@@ -57,7 +65,8 @@ def build_ledger(
 def _moments(flat):
     mean = flat.mean(axis=-1)
     centred = flat - mean[..., None]
-    return mean, centred @ centred.transpose(0, 2, 1) / (flat.shape[-1] - 1)
+    with np.errstate(invalid="ignore"):  # one path has no covariance
+        return mean, centred @ centred.transpose(0, 2, 1) / np.float64(flat.shape[-1] - 1)
 
 
 def compiled(names, trades, *, looks=None, years=0.25, equal=None):

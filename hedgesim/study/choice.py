@@ -36,7 +36,7 @@ class Estimates:
         n = len(self.mean_cost)
         if self.joint:
             both = np.concatenate([on_cost, on_risk])
-            return float(np.sqrt(max(0.0, both @ self.covariance @ both)))
+            return float(np.sqrt(np.maximum(both @ self.covariance @ both, 0.0)))
         parts = (on_cost @ self.covariance[:n, :n] @ on_cost, on_risk @ self.covariance[n:, n:] @ on_risk)
         return float(sum(np.sqrt(np.maximum(parts, 0.0))))
 
@@ -114,12 +114,10 @@ def estimates(ledger: Ledger, schedules: Ints, distribution: Distribution, setti
         risk = distribution.es975
         per_path = _cost_by_path(ledger, schedules, source)
         joint = per_path is not None
-        no_rows = np.empty((0, ledger.totals.shape[1]))
-        covariance = shortfall_error_covariance(
-            ledger.totals[schedules],
-            ES975_SHARE,
-            no_rows if per_path is None else per_path,
-        )
+        # Indexing copies, and totals may fill much of the memory.
+        totals = ledger.totals if len(schedules) == len(ledger.totals) else ledger.totals[schedules]
+        no_rows = np.empty((0, totals.shape[1]))
+        covariance = shortfall_error_covariance(totals, ES975_SHARE, no_rows if per_path is None else per_path)
         if per_path is None:
             n = len(schedules)
             whole = np.zeros((2 * n, 2 * n))

@@ -95,7 +95,7 @@ def _asymptotic(
     def lines(cov: Floats) -> Floats:
         own = cov[..., schedules, 0, 0]
         tilt = 2.0 * (cov[..., schedules, 0, 2] + cov[..., schedules, 1, 2])
-        return np.stack([own, own + tilt], axis=-2) * (looks / trades)
+        return np.asarray(np.stack([own, own + tilt], axis=-2) * (looks / trades))
 
     return lines(projection.cov), ledger.replicates.spread(lines(projection.resampled_cov))
 

@@ -86,10 +86,12 @@ class PowerLaw:
 
     def removable_se(self, trades: Floats) -> Floats:
         """Standard error of `removable` from the errors of the fit."""
-        _, slope = _shape(np.asarray(trades, dtype=np.float64), self.exponent, self.reference)
-        gradient = np.stack([np.ones_like(slope), slope])
+        far = self.reference**-self.exponent
+        log_far = np.log(self.reference) if np.isfinite(self.reference) else 0.0
+        by_exponent = self.coefficient * (far * log_far - trades**-self.exponent * np.log(trades))
+        gradient = np.stack([self.removable(trades), by_exponent])
         variance = np.einsum("in,ij,jn->n", gradient, self.log_covariance, gradient)
-        return np.asarray(self.removable(trades) * np.sqrt(np.maximum(variance, 0.0)))
+        return np.asarray(np.sqrt(np.maximum(variance, 0.0)))
 
 
 @dataclass(frozen=True)
