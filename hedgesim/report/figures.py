@@ -36,22 +36,36 @@ def name_rows(axes: Axes, view: View, rows: Sequence[int], places: Floats | Ints
         label.set_fontweight("bold" if r == view.best else "normal")
 
 
-def name_ticks(axes: Axes, view: View, rows: Sequence[int], width_mm: float) -> float:
-    """Schedule names under bars at 0..len(rows)-1, upright where there is no room; their depth in millimetres."""
-    per = width_mm / max(len(rows), 4)
-    labels = [style.clipped(view.names[r]) for r in rows]
-    widest = max(text_width(label, style.CHART, True) for label in labels)
-    upright = widest > per - 1.5
+def name_ticks(axes: Axes, view: View, rows: Sequence[int], width_mm: float) -> None:
+    """Schedule names under bars at 0..len(rows)-1, upright where there is no room."""
+    per, _, upright = _tick_room(view, rows, width_mm)
     step = max(1, math.ceil(4.6 / per)) if upright else 1
     shown = list(range(0, len(rows), step))
     if view.best in rows:
         # The chosen schedule keeps its name; a neighbour too close to it gives way.
         place = list(rows).index(view.best)
         shown = sorted({k for k in shown if abs(k - place) >= step} | {place})
-    axes.set_xticks(shown, [labels[k] for k in shown], rotation=90 if upright else 0)
+    axes.set_xticks(shown, [style.clipped(view.names[rows[k]]) for k in shown], rotation=90 if upright else 0)
     for label, k in zip(axes.get_xticklabels(), shown, strict=True):
         label.set_fontweight("bold" if rows[k] == view.best else "normal")
+
+
+def ticks_depth(view: View, rows: Sequence[int], width_mm: float) -> float:
+    """Millimetres that `name_ticks` takes under the frame."""
+    _, widest, upright = _tick_room(view, rows, width_mm)
     return 2.0 + (widest if upright else 3.5)
+
+
+def _tick_room(view: View, rows: Sequence[int], width_mm: float) -> tuple[float, float, bool]:
+    per = width_mm / max(len(rows), 4)
+    widest = max(text_width(style.clipped(view.names[r]), style.CHART, True) for r in rows)
+    return per, widest, widest > per - 1.5
+
+
+def centred(count: int) -> tuple[float, float]:
+    """Limits of an axis of `count` bars; few bars stay slim and in the middle."""
+    half = max(count, 4) / 2 + 0.2
+    return (count - 1) / 2 - half, (count - 1) / 2 + half
 
 
 def stack_title(view: View) -> str:
@@ -121,17 +135,17 @@ def variance_stack(axes: Axes, view: View, *, currency: str, width_mm: float) ->
     else:
         note = ""
     axes.set_ylim(low * 1.08, low * 1.08 + (top - low * 1.08) * 1.12)
-    axes.set_xlim(-0.6, max(len(rows), 4) - 0.4)
+    axes.set_xlim(*centred(len(rows)))
     scale, letter = style.unit_of(np.sqrt(np.array([top])))
     style.plain_axis(axes.yaxis, scale**2)
     axes.set_ylabel(f"variance of P&L, ({currency} {letter})\u00b2".replace(" )", ")"))
     axes.set_xlabel("schedule, rare to frequent" + (f"; {note}" if note else ""))
-    deepest = name_ticks(axes, view, rows, width_mm)
+    name_ticks(axes, view, rows, width_mm)
     handles: list[Line2D | Patch] = [Patch(color=style.COMPONENT[key], label=label) for _, key, label in parts]
     handles.append(
         Line2D([], [], color=style.INK, marker="_", ls="none", ms=9, mew=1.6, label="variance of P&L \u00b1 1 se")
     )
-    legend_below(axes, handles, columns=2, drop=deepest + 8.0)
+    legend_below(axes, handles, columns=2, drop=ticks_depth(view, rows, width_mm) + 8.0)
 
 
 def law_title(view: View) -> str:
@@ -197,7 +211,7 @@ def frequency_law(axes: Axes, view: View, *, currency: str) -> None:
         axes.plot(
             grid,
             view.asymptotic[first] * n[first] / grid / unit,
-            color=style.COMPONENT["costs"],
+            color=style.QUIET,
             lw=1.2,
             ls=(0, (5, 2)),
             zorder=2,
@@ -206,7 +220,7 @@ def frequency_law(axes: Axes, view: View, *, currency: str) -> None:
             Line2D(
                 [],
                 [],
-                color=style.COMPONENT["costs"],
+                color=style.QUIET,
                 lw=1.2,
                 ls=(0, (5, 2)),
                 label="asymptotic 1/N (quadratic variation)",
@@ -274,7 +288,7 @@ def covariance_shares(axes: Axes, view: View, *, currency: str) -> None:
     axes.axvline(0, color=style.INK, lw=0.9)
     low, high = float(min(left.min(), 0.0)), float(max(right.max(), 1.0 if view.varied else 0.0))
     axes.set_xlim(low - 0.03 * (high - low), high + 0.04 * (high - low))
-    axes.set_ylim(-0.7, max(len(rows), 4) - 0.3)
+    axes.set_ylim(*centred(len(rows)))
     name_rows(axes, view, rows, y)
     if view.varied:
         axes.axvline(1, color=style.QUIET, lw=0.8, ls=(0, (2, 2)))

@@ -49,7 +49,7 @@ def ridges(axes: Axes, view: View, totals: Floats, *, currency: str) -> None:
     for k, (r, y, (grid, density)) in enumerate(zip(rows, base, curves, strict=True)):
         colour = view.colours[r]
         axes.axhline(y, color=style.HAIR, lw=0.5, zorder=2 * k)
-        if len(sample[k]) < _FEW:
+        if 1 < len(sample[k]) < _FEW:
             axes.plot(
                 sample[k],
                 np.full(len(sample[k]), y + 0.12),
@@ -60,7 +60,7 @@ def ridges(axes: Axes, view: View, totals: Floats, *, currency: str) -> None:
                 zorder=2 * k + 1,
                 mew=0,
             )
-        else:
+        elif len(sample[k]) >= _FEW:
             lifted = y + 0.86 * density / tallest
             axes.fill_between(grid, y, lifted, color=colour, alpha=0.55, lw=0, zorder=2 * k + 1)
             axes.plot(grid, lifted, color=colour, lw=1.5 if r == view.best else 0.9, zorder=2 * k + 1)
@@ -69,12 +69,15 @@ def ridges(axes: Axes, view: View, totals: Floats, *, currency: str) -> None:
             axes.plot(-view.es975[r], y, marker="^", ms=5.5, color=style.INK, zorder=61, mew=0)
         axes.plot(view.mean[r], y, marker="o", ms=3.8, color=style.INK, zorder=61, mew=0)
     axes.set_xlim(low, high)
-    axes.set_ylim(-0.35, max(len(rows), 3) + 0.1)
+    axes.set_ylim(-0.35 if len(rows) > 3 else -0.9, max(len(rows), 3) + 0.1)
     name_rows(axes, view, rows, base)
     axes.tick_params(axis="y", length=0)
     axes.spines["left"].set_visible(False)
     style.money_axis(axes.xaxis, np.array([low, high]))
     axes.set_xlabel(f"P&L per life, {currency}, discounted to the start")
+    if not view.varied:
+        legend_below(axes, [Line2D([], [], color=style.INK, marker="o", ms=4, ls="none", label="outcome")], columns=1)
+        return
     handles = [
         Line2D([], [], color=style.INK, marker="o", ms=4, ls="none", label="mean"),
         Line2D([], [], color=style.COMPONENT["costs"], marker="|", ms=9, mew=1.5, ls="none", label="p01 and p05"),
@@ -104,7 +107,7 @@ def _density(sample: Floats, low: float, high: float) -> tuple[Floats, Floats]:
 def exceedance_title(view: View, currency: str) -> str:
     """The finding of the tail chart."""
     b = view.best
-    if not math.isfinite(view.es975[b]):
+    if not (view.varied and math.isfinite(view.es975[b])):
         return "Tails need more than one outcome"
     size = money_with_error(abs(view.es975[b]), view.es975_se[b], currency=currency)
     verb = "lose" if view.es975[b] >= 0 else "still earn"

@@ -46,11 +46,12 @@ def finding(view: View, facts: RunFacts) -> list[Sheet]:
     for heading, body in _reading(view):
         y = sheet.text(left, y, heading, bold=True, colour=style.ACCENT, width=width)
         y = sheet.text(left, y, body, size=9.0, width=width) + 2.5
-    if np.isfinite(view.objective[rows]).all() and top_of_cautions - below > 58.0:
-        axes = sheet.chart(
-            MARGIN_MM, below + 7, table_width, top_of_cautions - 4, tradeoff.objective_title(view), pad=(17, 25)
-        )
-        tradeoff.objective_bars(axes, view, rows, currency=facts.currency, width_mm=table_width - 17)
+    width_mm = table_width - 17.0
+    under = figures.ticks_depth(view, rows, width_mm) + 8.5
+    if np.isfinite(view.objective[rows]).all() and top_of_cautions - below - under > 40.0:
+        title = tradeoff.objective_title(view)
+        axes = sheet.chart(MARGIN_MM, below + 8, table_width, top_of_cautions - 3, title, pad=(17, under))
+        tradeoff.objective_bars(axes, view, rows, currency=facts.currency, width_mm=width_mm)
     y = max(top_of_cautions, below + 6)
     sheet.rule(MARGIN_MM, y - 1.5, TEXT_WIDTH_MM, colour=style.ACCENT)
     y = sheet.text(MARGIN_MM, y, "Cautions", bold=True, colour=style.ACCENT)
@@ -230,8 +231,7 @@ def price_of_risk(view: View, facts: RunFacts) -> list[Sheet]:
     steps = view.steps[:20]
     columns = [
         Column("schedule", [s.schedule for s in steps], "left"),
-        Column("next finer", [s.finer for s in steps], "left"),
-        Column("extra cost per\nunit of risk removed", [_with_error(s.price, s.price_se) for s in steps]),
+        Column("extra cost per unit of risk\nremoved by the next row", [_price(s.price, s.price_se) for s in steps]),
         Column("best for a cost\nof risk in", [_range(s.best_from, s.best_to) for s in steps]),
     ]
     y = sheet.table(
@@ -251,10 +251,8 @@ def price_of_risk(view: View, facts: RunFacts) -> list[Sheet]:
     return [sheet]
 
 
-def _with_error(value: float, error: float) -> str:
-    if not math.isfinite(value):
-        return ""
-    return f"{value:.3g} \u00b1 {error:.1g}" if math.isfinite(error) else f"{value:.3g}"
+def _price(value: float, error: float) -> str:
+    return money_with_error(value, error) if math.isfinite(value) else ""
 
 
 def _range(low: float, high: float) -> str:

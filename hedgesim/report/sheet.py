@@ -106,7 +106,7 @@ class Sheet:
         self.figure.add_artist(Rectangle((0, 1 - 3.2 / HEIGHT_MM), 1, 3.2 / HEIGHT_MM, color=style.ACCENT, lw=0))
         self.text(MARGIN_MM, 6.5, shorten(self.kicker, TEXT_WIDTH_MM, style.BODY), colour=style.QUIET, kind="kicker")
         size = style.PAGE_TITLE
-        while size > 11 and len(wrap(self.title, TEXT_WIDTH_MM, size, True)) > 2:
+        while size > 11 and len(wrap(self.title, TEXT_WIDTH_MM, size, True)) > (2 if size > 13 else 3):
             size -= 0.5
         self.top = self.text(
             MARGIN_MM, 12.0, self.title, size=size, bold=True, width=TEXT_WIDTH_MM, colour=style.ACCENT

@@ -2,6 +2,7 @@
 
 import math
 from collections.abc import Sequence
+from itertools import pairwise
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -10,7 +11,7 @@ from matplotlib.patches import Patch
 
 from hedgesim.market import Floats
 from hedgesim.report import style
-from hedgesim.report.figures import legend_below, name_ticks
+from hedgesim.report.figures import centred, legend_below, name_ticks, ticks_depth
 from hedgesim.report.sheet import text_width
 from hedgesim.report.view import View
 from hedgesim.study.money import money, money_with_error
@@ -38,18 +39,18 @@ def objective_bars(axes: Axes, view: View, rows: Sequence[int], *, currency: str
         x, sums, yerr=np.nan_to_num(view.objective_se[list(rows)]), fmt="_", ms=9, color=style.INK, elinewidth=0.9
     )
     axes.axhline(0, color=style.QUIET, lw=0.7)
-    axes.set_xlim(-0.6, max(len(rows), 4) - 0.4)
+    axes.set_xlim(*centred(len(rows)))
     top = float(np.nanmax(np.maximum(sums, below + charge)))
     axes.set_ylim(min(0.0, 1.08 * float(np.nanmin(np.minimum(cost, sums)))), 1.12 * top if top > 0 else None)
     style.money_axis(axes.yaxis, np.append(sums, below + charge), ticks=4)
     axes.set_ylabel(f"objective, {currency}")
-    deepest = name_ticks(axes, view, rows, width_mm)
+    name_ticks(axes, view, rows, width_mm)
     handles: list[Line2D | Patch] = [
         Patch(color=style.COMPONENT["costs"], label=view.cost_name),
         Patch(color=view.colours[view.best], label="charge for risk (shade: frequency)"),
         Line2D([], [], color=style.INK, marker="_", ls="none", ms=9, label="objective \u00b1 1 se"),
     ]
-    legend_below(axes, handles, columns=3, drop=deepest + 3.5)
+    legend_below(axes, handles, columns=3, drop=ticks_depth(view, rows, width_mm) + 3.5)
 
 
 def cost_risk_title(view: View, currency: str) -> str:
@@ -83,7 +84,7 @@ def cost_risk(axes: Axes, view: View, *, currency: str) -> None:
         axes.set_yticks([])
         return
     ex, ey = np.nan_to_num(view.risk_se), np.nan_to_num(view.cost_se)
-    joined = [k for k in np.argsort(x) if ok[k] and view.efficient[k]]
+    joined = [int(k) for k in np.argsort(x) if ok[k] and view.efficient[k]]
     axes.plot(x[joined], y[joined], color=style.QUIET, lw=1.0, zorder=2)
     for k in np.flatnonzero(ok):
         axes.errorbar(
@@ -127,6 +128,7 @@ def cost_risk(axes: Axes, view: View, *, currency: str) -> None:
         y,
         sorted((int(k) for k in np.flatnonzero(ok)), key=lambda k: (k != b, not view.tied[k], not view.efficient[k])),
         view.names,
+        joined,
     )
     handles = [
         Line2D([], [], color=style.QUIET, marker="o", lw=1.0, label="efficient (\u00b1 1 se)"),
@@ -156,13 +158,19 @@ def _pad(axes: Axes, x: Floats, y: Floats, ex: Floats, ey: Floats) -> None:
         setter(low - room, high + room)
 
 
-def label_points(axes: Axes, x: Floats, y: Floats, order: Sequence[int], names: Sequence[str]) -> None:
-    """Write names beside points, first come first served; a name that finds no free place is left out."""
+def label_points(
+    axes: Axes, x: Floats, y: Floats, order: Sequence[int], names: Sequence[str], line: Sequence[int]
+) -> None:
+    """Write names beside points and off the line through `line`; a name that finds no free place is left out."""
     figure = axes.figure
     pixel = figure.dpi / 72
     frame = axes.get_window_extent()
     at = {k: axes.transData.transform((x[k], y[k])) for k in order}
     taken = [(p[0] - 4 * pixel, p[1] - 4 * pixel, p[0] + 4 * pixel, p[1] + 4 * pixel) for p in at.values()]
+    for a, b in pairwise(line):
+        for step in np.linspace(0.0, 1.0, 2 + int(np.hypot(*(at[b] - at[a])) / (5 * pixel))):
+            p = at[a] + step * (at[b] - at[a])
+            taken.append((p[0] - pixel, p[1] - pixel, p[0] + pixel, p[1] + pixel))
     for k in order:
         w = text_width(names[k], style.CHART) / 25.4 * figure.dpi + 3 * pixel
         h = style.CHART * 1.3 * pixel

@@ -139,9 +139,9 @@ def view_of(study: Study, ledger: Ledger) -> View:
     """Put the schedules of `study` in order of frequency; `ledger` is the one that was studied."""
     d, v, c, f = study.distribution, study.variances, study.choice, study.frequency
     n = len(study.schedules)
-    intervals, asymptotic = np.full(n, np.nan), np.full(n, np.nan)
-    intervals[f.rows], asymptotic[f.rows] = f.trades, f.asymptotic_removable
-    order = np.lexsort((np.arange(n), np.where(np.isfinite(intervals), intervals, study.trades)))
+    intervals, asymptotic, years = np.full(n, np.nan), np.full(n, np.nan), np.zeros(n)
+    intervals[f.rows], asymptotic[f.rows], years[f.rows] = f.trades, f.asymptotic_removable, f.interval_years
+    order = np.lexsort((np.arange(n), -years, np.where(np.isfinite(intervals), intervals, study.trades)))
     names = tuple(study.schedules[k] for k in order)
     p01, p05 = (d.quantiles[order, QUANTILE_LEVELS.index(level)] for level in (0.01, 0.05))
     reference_gross = float("nan")
