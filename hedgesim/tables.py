@@ -21,13 +21,12 @@ from hedgesim.book import Book
 from hedgesim.kernels.simulate import Payoff
 from hedgesim.kernels.tables import Table, fill_cells
 from hedgesim.market import Floats, Ints, LookGrid, Market
+from hedgesim.paths.gbm import REACH_SD, Reach
 
 TOLERANCE = 1e-6
 _VALUE_BOUND = 2.307 / 46080
 _SLOPE_BOUND = 7.453e-5 * 2.307
 _PEAK_DENSITY = 0.3989
-# Beyond 8.5 standard deviations N differs from 0 or 1 by 1e-17, and no path goes there: 2e-17 a look.
-_REACH = 8.5
 
 
 @dataclass(frozen=True)
@@ -54,14 +53,6 @@ def terms(book: Book, market: Market) -> Terms:
         strike_leg=book.units * book.strike * np.exp(-market.rate * book.expiry_t),
         log_strike=np.log(book.strike) - growth * book.expiry_t,
     )
-
-
-@dataclass(frozen=True)
-class Reach:
-    """Log prices that the paths can visit, (underlying, look): centre and half-width."""
-
-    centre: Floats
-    half: Floats
 
 
 def slope_table(
@@ -142,7 +133,7 @@ def _table(
 def _span(reach: Reach, u: int, look: int, log_strike: Floats, root: Floats) -> tuple[float, float]:
     """Where paths go and the functions still move; a sliver when the two do not meet."""
     centre, half = float(reach.centre[u, look]), max(float(reach.half[u, look]), 1e-9)
-    moving = _REACH * root + 0.5 * root * root
+    moving = REACH_SD * root + 0.5 * root * root
     bottom = max(centre - half, float((log_strike - moving).min()))
     top = min(centre + half, float((log_strike + moving).max()))
     if top - bottom < 1e-9:

@@ -74,9 +74,7 @@ class _Chunk:
     residual_bins: Ints
     residual_sum: Floats
     days: Floats
-    detail: Floats | None
-    trades_detail: Floats | None
-    turnover_detail: Floats | None
+    detail: tuple[Floats, Floats, Floats] | None
 
 
 def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, source: Gbm, costs: CostTerms) -> Setup:
@@ -137,7 +135,7 @@ def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, s
         schedules=len(compiled.names),
         count_units=bool((costs.per_unit != 0).any()),
     )
-    tickets = np.cumsum(compiled.trades_at * discount, axis=1)
+    tickets: Floats = np.cumsum(np.where(compiled.trades_at, discount, 0.0), axis=1)
     open_at_end = bool((book.expiry_look > looks).any())
     moving = np.array([False, open_at_end and not same_vols, True, True, True, True, True, True, True])
     accounts = Accounts(
@@ -201,7 +199,7 @@ def simulate(
     setup = prepare(market=market, book=book, grid=grid, compiled=compiled, source=source, costs=costs)
     bounds = _chunk_bounds(count)
     groups = min(len(bounds), _LARGEST_GROUPS)
-    merger = _Merger(setup, count, groups, len(bounds), detail)
+    merger = _Merger(setup, count, groups, len(bounds))
     done = 0
     for chunk in _in_order(setup, source.seed, bounds, threads or os.cpu_count() or 1, detail, chunks_per_block):
         merger.add(chunk)
@@ -284,16 +282,14 @@ def _run(setup: Setup, seed: int, begin: int, end: int, detail: bool) -> _Chunk:
         residual_bins=bins,
         residual_sum=residual_sum,
         days=days,
-        detail=kept,
-        trades_detail=trades if detail else None,
-        turnover_detail=turnover if detail else None,
+        detail=None if kept is None else (kept, trades, turnover),
     )
 
 
 class _Merger:
     """Adds chunk results in path order; merges moments by the pairwise update of Chan, Golub and LeVeque (1983)."""
 
-    def __init__(self, setup: Setup, count: int, groups: int, chunks: int, detail: bool) -> None:
+    def __init__(self, setup: Setup, count: int, groups: int, chunks: int) -> None:
         schedules = setup.hedging.schedules
         width = len(setup.accounts.moving)
         self._setup, self._count, self._chunks, self._groups = setup, count, chunks, groups
@@ -305,7 +301,7 @@ class _Merger:
         self._bins = np.zeros((schedules, RESIDUAL_BINS), dtype=np.int64)
         self._residual_sum = np.zeros(schedules)
         self._days: list[Floats] = []
-        self._detail: list[tuple[Floats, Floats, Floats]] | None = [] if detail else None
+        self._detail: list[tuple[Floats, Floats, Floats]] = []
         self._begin, self._number = 0, 0
 
     def add(self, chunk: _Chunk) -> None:
@@ -321,9 +317,8 @@ class _Merger:
             self._bins += chunk.residual_bins
             self._residual_sum += chunk.residual_sum
             self._days.append(chunk.days)
-        if self._detail is not None and chunk.detail is not None:
-            assert chunk.trades_detail is not None and chunk.turnover_detail is not None
-            self._detail.append((chunk.detail, chunk.trades_detail, chunk.turnover_detail))
+        if chunk.detail is not None:
+            self._detail.append(chunk.detail)
         self._begin += chunk.paths
         self._number += 1
 

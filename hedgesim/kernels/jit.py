@@ -29,7 +29,8 @@ def _cache_folder() -> Path:
 
 
 if "NUMBA_CACHE_DIR" not in os.environ:
-    numba.config.CACHE_DIR = str(_cache_folder())
+    _config: Any = numba.config
+    _config.CACHE_DIR = str(_cache_folder())
 
 # No fastmath: without it the same bits come out on every processor.
 kernel: Any = numba.njit(nogil=True, cache=True, error_model="numpy")

@@ -248,7 +248,7 @@ def run_chunk(
     lanes = min(TILE, count)
     tile = (underlyings, lanes)
     log_x, x, y = np.empty(tile), np.empty(tile), np.empty(tile)
-    slope, gamma, hedge_gamma = np.empty(tile), np.empty(tile), np.empty(tile)
+    slope, gamma = np.empty(tile), np.empty(tile)
     target, price, paid, delivered = np.empty(tile), np.empty(tile), np.empty(tile), np.zeros(tile)
     fresh = np.empty(tile)
     state = np.empty((underlyings, 4, lanes), dtype=np.uint64)

@@ -7,10 +7,11 @@ from typing import Any
 
 import numpy as np
 from llvmlite import ir
-from numba import types
-from numba.extending import intrinsic
+from numba import extending, types
 
 from hedgesim.kernels.jit import device
+
+_intrinsic: Any = extending.intrinsic
 
 _LOG2E = 1.4426950408889634
 _LN2_HIGH = 0.693147180369123816490
@@ -20,7 +21,7 @@ _SQRT_HALF = 0.70710678118654752440
 _INV_SQRT_2PI = 0.39894228040143267794
 
 
-@intrinsic
+@_intrinsic
 def as_bits(typingctx: Any, x: Any) -> Any:
     """The 64 bits of a float as a signed integer."""
 
@@ -30,7 +31,7 @@ def as_bits(typingctx: Any, x: Any) -> Any:
     return types.int64(types.float64), codegen
 
 
-@intrinsic
+@_intrinsic
 def as_float(typingctx: Any, x: Any) -> Any:
     """The float whose 64 bits are a signed integer."""
 
@@ -40,9 +41,9 @@ def as_float(typingctx: Any, x: Any) -> Any:
     return types.float64(types.int64), codegen
 
 
-@intrinsic
+@_intrinsic
 def fma(typingctx: Any, a: Any, b: Any, c: Any) -> Any:
-    """a * b + c, rounded once."""
+    """Fused multiply-add: a * b + c, rounded once."""
 
     def codegen(context: Any, builder: Any, signature: Any, args: Any) -> Any:
         return builder.fma(*args)
