@@ -48,7 +48,6 @@ def test_kernel_agrees_with_the_plain_twin_component_by_component(seed, remark, 
     for n, life in enumerate(laid.inceptions):
         mark, hedge = laid.vol_paths(n)
         limit = 1e-10 * gross_values(laid)[n]
-        below = 0.0
         for k in range(len(ledger.schedules)):
             told = look_by_look(
                 life.book, life.market, life.grid, life.compiled, k, costs, life.price, mark_path=mark, hedge_path=hedge

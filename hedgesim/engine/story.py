@@ -146,7 +146,7 @@ def look_by_look(
     target = np.zeros_like(price)
     target[:, :-1] = -slope[:, :-1] / weight
     delivered = _delivered(book, market, look, final)
-    gross_units = np.bincount(book.underlying, np.abs(book.units), len(market.names)) + np.abs(book.initial_units)
+    gross_units = np.abs(book.initial_units) + _by_underlying(np.abs(book.units)[:, None], book, market)[:, 0]
     held, trade = _hedge(
         target, delivered, compiled.trades_at[schedule_index], book.initial_units, _SMALLEST_TRADE * gross_units
     )

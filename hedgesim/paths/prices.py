@@ -2,6 +2,7 @@
 
 import csv
 import difflib
+import io
 import re
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass
@@ -223,28 +224,28 @@ def _read_cells(
 
 def _read_rows(path: Path, file: str) -> list[tuple[int, list[str]]]:
     """Rows that are not blank, with the line each starts on."""
-    rows = []
     try:
-        with path.open(encoding="utf-8-sig", newline="") as stream:
-            reader = csv.reader(stream)
-            line = 1
-            for row in reader:
-                if any(cell.strip() for cell in row):
-                    rows.append((line, row))
-                line = reader.line_num + 1
+        content = path.read_bytes()
+    except OSError as error:
+        missing = isinstance(error, FileNotFoundError)
+        reason = "there is no such file" if missing else f"it cannot be read ({error.strerror})"
+        raise ExperimentError([Problem(file, None, None, "", reason, "the path of a CSV file of prices")]) from error
+    try:
+        text = content.decode("utf-8-sig")
     except UnicodeDecodeError as error:
-        raise ExperimentError(
-            [Problem(file, None, None, "", f"byte {error.start + 1} is not UTF-8", "save the file as UTF-8")]
-        ) from error
+        line = content.count(b"\n", 0, error.start) + 1
+        raise ExperimentError([Problem(file, line, None, "", "this is not UTF-8", "save the file as UTF-8")]) from error
+    reader = csv.reader(io.StringIO(text, newline=""))
+    rows, line = [], 1
+    try:
+        for row in reader:
+            if any(cell.strip() for cell in row):
+                rows.append((line, row))
+            line = reader.line_num + 1
     except csv.Error as error:
         raise ExperimentError(
-            [Problem(file, reader.line_num, None, "", f"not a CSV row ({error})", "comma-separated text")]
+            [Problem(file, line, None, "", f"not a row of CSV ({error})", "cells separated by commas, quotes closed")]
         ) from error
-    except OSError as error:
-        reason = (
-            "there is no such file" if isinstance(error, FileNotFoundError) else f"cannot be read ({error.strerror})"
-        )
-        raise ExperimentError([Problem(file, None, None, "", reason, "the path of a CSV file of prices")]) from error
     return rows
 
 
