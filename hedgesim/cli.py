@@ -64,7 +64,7 @@ def run(
 @_file
 @_set
 def check(file: Path, overrides: tuple[str, ...]) -> None:
-    """Check the experiment in FILE and show what would be run, without running it."""
+    """Check the experiment in FILE and show what would be run."""
     with _exit_status():
         from hedgesim.experiment.loader import load_experiment
 

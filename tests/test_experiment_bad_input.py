@@ -1,11 +1,16 @@
 """Malformed experiments: the whole message, line and column included."""
 
+import json
 from pathlib import Path
+from typing import Any
 
 import pytest
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
-from hedgesim.errors import ExperimentError
+from hedgesim.errors import ExperimentError, Problem
 from hedgesim.experiment.loader import load_experiment
+from hedgesim.experiment.nodes import compose
 
 BASE = """\
 title: Two calls
@@ -135,6 +140,46 @@ def test_a_file_that_does_not_exist_or_is_a_folder() -> None:
 def test_a_file_larger_than_the_bound_is_not_read(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr("hedgesim.experiment.loader.MOST_BYTES", 10)
     assert problems_of(BASE) == ["x.yaml: is larger than 0 MB - name an experiment file"]
+
+
+scalars = st.one_of(
+    st.none(),
+    st.booleans(),
+    st.integers(),
+    st.floats(),
+    st.text(max_size=8),
+    st.sampled_from(["22%", "2bp", "1d", "4 looks", "20/0", "2027-01-01", "never", "mark", "prices", "closes.csv"]),
+)
+anything = st.recursive(
+    scalars, lambda inner: st.lists(inner, max_size=2) | st.dictionaries(st.text(max_size=4), inner)
+)
+
+
+def places_in(data: Any, path: tuple[str | int, ...] = ()) -> list[tuple[str | int, ...]]:
+    items = data.items() if isinstance(data, dict) else enumerate(data) if isinstance(data, list) else ()
+    return [place for key, value in items for place in [(*path, key), *places_in(value, (*path, key))]]
+
+
+@settings(suppress_health_check=[HealthCheck.function_scoped_fixture], deadline=None)
+@given(st.sampled_from([BASE, PRICES, THREE]), st.data())
+def test_any_value_anywhere_loads_or_is_told_with_its_line(valid: str, data: st.DataObject) -> None:
+    content = compose(valid, file="x.yaml").data
+    *above, last = data.draw(st.sampled_from(places_in(content)))
+    container = content
+    for key in above:
+        container = container[key]
+    container[last] = data.draw(anything)
+    Path("x.yaml").write_text(json.dumps(content), encoding="utf-8")
+    found: tuple[Problem, ...] = ()
+    try:
+        load_experiment("x.yaml")
+    except ExperimentError as error:
+        found = error.problems
+        told = bool(found)
+    else:
+        told = True
+    assert told
+    assert all(problem.message and (problem.line is not None or problem.file != "x.yaml") for problem in found)
 
 
 def test_everything_wrong_is_reported_at_once_in_the_order_of_the_file() -> None:

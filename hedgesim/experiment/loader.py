@@ -183,7 +183,7 @@ class _Reading:
                 self.problems.append(Problem(self.file, 1, 1, "", what, "begin with title: and market:"))
             raise ExperimentError(self.problems)
         for override in overrides:
-            self.hash.update(b"\0set\0" + override.encode())
+            self.hash.update(b"\0set\0" + override.encode(errors="surrogateescape"))
             self._override(override)
         self._inline_book()
 

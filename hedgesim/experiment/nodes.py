@@ -1,5 +1,6 @@
 """YAML text to plain values, each with its line and column; the parts of YAML that surprise are refused."""
 
+import re
 from dataclasses import dataclass, field
 from typing import Any, NamedTuple
 
@@ -8,6 +9,9 @@ import yaml
 from hedgesim.experiment.values import BadValueError, parse_scalar, shortest
 
 KeyPath = tuple[str | int, ...]
+# Escapes such as "\ud83d\ude00" give the two halves of a character, which are no text to Python.
+_HALF_CHARACTER = re.compile("[\ud800-\udfff]")
+_HALF_ADVICE = ("an escape for half a character", "write the character itself")
 MOST_DEPTH = 20
 MOST_NODES = 1_000_000
 
@@ -129,6 +133,9 @@ class _Composer:
         return self._mapping(path) if isinstance(event, yaml.MappingStartEvent) else self._sequence(path)
 
     def _scalar(self, event: Any, path: KeyPath, place: Place) -> Any:
+        if _HALF_CHARACTER.search(event.value):
+            self._fault(path, *_HALF_ADVICE, place, unread=True)
+            return None
         if event.style is not None or event.tag is not None:
             return event.value
         try:
@@ -151,6 +158,9 @@ class _Composer:
                 self._fault(None, "a key must be a word", "write key: value", place)
                 raise _StopReading
             name = event.value
+            if _HALF_CHARACTER.search(name):
+                self._fault(None, *_HALF_ADVICE, place)
+                raise _StopReading
             inner = (*path, name)
             if name == "<<" and event.style is None:
                 self._fault(inner, "merging with << is not accepted", "write the keys out", place)
@@ -181,6 +191,8 @@ def _in_words(error: yaml.MarkedYAMLError) -> tuple[str, str]:
     problem = error.problem or "not YAML"
     if "'\\t'" in problem:
         return "a tab where spaces are needed", "indent with spaces"
+    if match := re.fullmatch(r"found character '(.)' that cannot start any token", problem):
+        return f"a value cannot begin with {match[1]}", "put it in quotes"
     if "mapping values are not allowed" in problem:
         return "a ': ' where no key can stand", "line keys up, write one a line, and put text with a colon in quotes"
     context = f" {error.context}" if error.context else ""
