@@ -8,6 +8,7 @@ from itertools import combinations
 from typing import TYPE_CHECKING, Any
 
 from hedgesim.experiment.fields import Fault, nearest, unknown_name
+from hedgesim.experiment.nodes import KeyPath
 from hedgesim.experiment.values import as_percent
 
 if TYPE_CHECKING:
@@ -209,7 +210,7 @@ def _possible(names: tuple[str, ...], order: tuple[str, ...], given: Mapping[str
 
 
 def _dates(parts: Parts) -> Iterator[Fault]:
-    terms: list[tuple[tuple[str | int, ...], object]] = [
+    terms: list[tuple[KeyPath, object]] = [
         (("book", i, "expiry"), position.expiry) for i, position in enumerate(parts.book) if position is not None
     ]
     if parts.paths is not None:

@@ -18,9 +18,9 @@ from pydantic import (
 from pydantic_core import CoreSchema, InitErrorDetails, PydanticCustomError, core_schema
 
 from hedgesim.experiment import values
+from hedgesim.experiment.nodes import KeyPath
 from hedgesim.experiment.values import BadValueError, shown
 
-Path = tuple[str | int, ...]
 _KIND = "experiment_fault"
 DURATION_JSON: dict[str, Any] = {
     "anyOf": [
@@ -34,7 +34,7 @@ _PERCENT_JSON = {"type": "string", "pattern": r"^[-+]?(\.[0-9]+|[0-9][0-9_]*(\.[
 class Fault(NamedTuple):
     """Something wrong at a path below a section; `on_key` when the key rather than its value is wrong."""
 
-    path: Path
+    path: KeyPath
     message: str
     advice: str
     on_key: bool = False
@@ -72,7 +72,7 @@ def faults_of(error: ValidationError, section: type[BaseModel] | None = None) ->
     return [f for f in faults if not (f.message == "missing" and len(f.path) == 1 and f.path[0] in mistyped)]
 
 
-def _in_words(detail: Any, path: Path, section: type[BaseModel] | None) -> tuple[str, str, bool]:
+def _in_words(detail: Any, path: KeyPath, section: type[BaseModel] | None) -> tuple[str, str, bool]:
     value, kind = detail["input"], detail["type"]
     key = str(path[-1]) if path else ""
     if kind == "extra_forbidden":

@@ -2,7 +2,7 @@
 
 import hashlib
 import os
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any
@@ -225,11 +225,13 @@ class _Reading:
             self.keys.pop(old, None)
         self.spoilt = {p for p in self.spoilt if p[: len(path)] != path}
         container[key] = tree.data
+        if path == ("book",):
+            self.book = None
         self.places.update({(*path, *below): place for below in tree.places} | {path: place})
         self.keys.update({(*path, *below): place for below in tree.keys} | {path: place})
         self._take(tree, path)
 
-    def _step_into(self, words: list[str], wrong: Any) -> tuple[Any, str | int, KeyPath] | None:
+    def _step_into(self, words: list[str], wrong: Callable[[str, str], None]) -> tuple[Any, str | int, KeyPath] | None:
         """Walk to the container of the last key; keys that contain dots are matched whole, sections are created."""
         current: Any = self.data
         path: KeyPath = ()
@@ -239,7 +241,8 @@ class _Reading:
                 current = self.data["book"]
             if isinstance(current, list):
                 if not words[0].isdecimal() or int(words[0]) >= len(current):
-                    wrong(f"no item {words[0]!r} in {dotted(path)}", f"items are numbered 0 to {len(current) - 1}")
+                    advice = f"items are numbered 0 to {len(current) - 1}" if current else "the list is empty"
+                    wrong(f"no item {words[0]!r} in {dotted(path)}", advice)
                     return None
                 key: str | int = int(words[0])
                 words = words[1:]
