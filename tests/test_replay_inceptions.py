@@ -143,6 +143,8 @@ def test_the_schedule_of_every_look_is_added_last_unless_asked_for():
     asked = lay(history(), [call(Expiry(days=10.0))], Inceptions("days", 5.0), schedules=[daily, WEEKLY])
     ledger = replay_laid(asked, costs=random_costs(1, 1), seed=0)
     assert ledger.schedules == ("every 1d", "every 5d")
+    assert all(life.compiled.names == ledger.schedules for life in asked.inceptions)
+    assert all(life.compiled.trades_at.shape == (2, 11) for life in asked.inceptions)
     assert ledger.reference == 0
 
 

@@ -97,4 +97,7 @@ def test_a_single_inception_has_no_standard_error():
     assert ledger.count == 1
     assert len(ledger.replicates.mean) == 0
     assert np.isnan(ledger.replicates.spread(ledger.replicates.mean)).all()
+    error = ledger.replicates.standard_error(lambda moments: moments.mean.sum(axis=-1))
+    assert error.shape == (1,)
+    assert np.isnan(error).all()
     assert np.isnan(ledger.moments.cov).all()

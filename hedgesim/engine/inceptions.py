@@ -1,7 +1,7 @@
 """Inceptions over a price history: which rows start a life, which rows end it, and the book fixed at each."""
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -220,6 +220,9 @@ def lay_inceptions(
         )
     every = np.all([life.compiled.trades_at.all(axis=1) for life in lives], axis=0)
     reference = int(np.argmax(every))
+    if reference < len(schedules):
+        asked_only = {id(c): _without_last(c) for c in known.values()}
+        lives = [replace(life, compiled=asked_only[id(life.compiled)]) for life in lives]
     return Laid(
         history=history,
         inceptions=tuple(lives),
@@ -228,6 +231,16 @@ def lay_inceptions(
         reference=reference,
         reference_added=reference == len(schedules),
         notes=(*history.notes, *notes),
+    )
+
+
+def _without_last(compiled: Compiled) -> Compiled:
+    return Compiled(
+        names=compiled.names[:-1],
+        trades_at=frozen(compiled.trades_at[:-1], bool),
+        intervals=frozen(compiled.intervals[:-1], np.int64),
+        interval_years=frozen(compiled.interval_years[:-1]),
+        equal=frozen(compiled.equal[:-1], bool),
     )
 
 

@@ -68,7 +68,9 @@ class Replicates:
     def standard_error(self, statistic: Callable[[Moments], NDArray[np.float64]]) -> Floats:
         """Standard error of `statistic(moments)`, an array; nan with fewer than eight resamples."""
         if len(self.mean) < 8:
-            return np.full(np.shape(statistic(Moments(self.mean[0], self.cov[0]))), np.nan)
+            blank = Moments(np.zeros(self.mean.shape[1:]), np.zeros(self.cov.shape[1:]))
+            with np.errstate(all="ignore"):
+                return np.full(np.shape(statistic(blank)), np.nan)
         return self.spread(np.array([statistic(Moments(m, c)) for m, c in zip(self.mean, self.cov, strict=True)]))
 
     def spread(self, values: Floats) -> Floats:

@@ -94,7 +94,7 @@ def replay_laid(laid: Laid, *, costs: CostTerms, seed: int = 1, threads: int | N
     resamples, replicates = _bootstrap(columns, _expected_block(lives), seed)
     return Ledger(
         engine="replay",
-        schedules=_names(laid),
+        schedules=lives[0].compiled.names,
         underlyings=laid.history.names,
         components=COMPONENTS,
         count=count,
@@ -113,16 +113,10 @@ def replay_laid(laid: Laid, *, costs: CostTerms, seed: int = 1, threads: int | N
     )
 
 
-def _names(laid: Laid) -> tuple[str, ...]:
-    names = laid.inceptions[0].compiled.names
-    return names if laid.reference_added else names[:-1]
-
-
 def _terms(laid: Laid, costs: CostTerms) -> Terms:
     history, lives = laid.history, laid.inceptions
     first = lives[0]
     looks = np.array([life.grid.looks for life in lives])
-    shown = len(_names(laid))
     series = np.full(history.price.shape, np.nan) if history.mark_vol is None else history.mark_vol
     return Terms(
         t=frozen(history.t),
@@ -133,7 +127,7 @@ def _terms(laid: Laid, costs: CostTerms) -> Terms:
         start=frozen([life.row for life in lives], np.int64),
         looks=frozen(looks, np.int64),
         offset=frozen(np.concatenate([[0], np.cumsum(looks + 1)[:-1]]), np.int64),
-        trades_at=frozen(np.concatenate([life.compiled.trades_at[:shown] for life in lives], axis=1), bool),
+        trades_at=frozen(np.concatenate([life.compiled.trades_at for life in lives], axis=1), bool),
         underlying=frozen(first.book.underlying, np.int64),
         is_call=frozen(first.book.is_call, bool),
         physical=frozen(first.book.physical, bool),
