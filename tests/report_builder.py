@@ -130,6 +130,19 @@ def ledger(every, *, paths=4000, looks=126, underlyings=("CORVANE",), replayed=F
     )
 
 
+def scaled(book, factor):
+    """The same ledger for a position `factor` times as large."""
+    r = book.replicates
+    return replace(
+        book,
+        moments=Moments(book.moments.mean * factor, book.moments.cov * factor**2),
+        replicates=replace(r, mean=r.mean * factor, cov=r.cov * factor**2),
+        totals=book.totals * factor,
+        turnover=book.turnover * factor,
+        detail=book.detail * factor,
+    )
+
+
 def compiled(every, looks=126):
     """What the schedules ask for, as `compile_schedules` would say."""
     flags = np.zeros((len(every), looks + 1), dtype=bool)

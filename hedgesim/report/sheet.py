@@ -190,6 +190,8 @@ class Sheet:
             give = min(max(over, 0.0), max(widths[k] - 18.0, 0.0))
             widths[k] -= give
             over -= give
+        if over > 0:
+            gap = max(gap - over / len(columns), 1.2)
         spare = max(-over, 0.0) / max(len(columns), 1)
         spare = min(spare, 9.0)
         edges = [left]

@@ -1,0 +1,383 @@
+"""The review pack: every kind of run renders, nothing is clipped or overlaps, and the pages say what the study says."""
+
+import math
+import re
+from dataclasses import replace
+from datetime import UTC, datetime
+from functools import lru_cache
+from itertools import combinations
+
+import numpy as np
+import pytest
+import report_builder
+from matplotlib.text import Text
+from pypdf import PdfReader
+
+from hedgesim.report import write_report
+from hedgesim.report.facts import CAUTION
+from hedgesim.report.pack import build
+from hedgesim.report.style import COMPONENT, report_style, schedule_shades
+from hedgesim.report.view import view_of
+from hedgesim.study import Settings, study
+from hedgesim.study.findings import sentence
+from hedgesim.study.money import money, money_with_error
+
+CREATED = datetime(2027, 3, 1, 17, 30, tzinfo=UTC)
+KINDS = {
+    "ten schedules": {"every": [1, 2, 3, 6, 9, 14, 21, 42, 63, 126]},
+    "one schedule": {"every": [6]},
+    "forty schedules": {"every": list(range(1, 41)), "paths": 1000},
+    "price history": {"every": [1, 2, 3, 5, 10, 21, 63], "replayed": True, "paths": 120},
+    "price history, every look not asked for": {"every": [2, 6, 21], "replayed": True, "paths": 60},
+    "one inception": {"every": [1, 3, 21], "replayed": True, "paths": 1},
+    "two underlyings": {"every": [1, 2, 6, 21, 63], "underlyings": ("CORVANE", "TESSARD"), "paths": 1500},
+}
+_cache = {}
+
+
+def made(kind, **changes):
+    """Study and facts of one kind of run."""
+    key = (kind, tuple(sorted(changes.items())))
+    if key not in _cache:
+        arguments = KINDS[kind]
+        book = report_builder.ledger(**arguments)
+        hidden = tuple(n for n in book.schedules if n == "every look" and 1 not in arguments["every"])
+        settings = Settings(
+            **{
+                "mean": "costs",
+                "risk": "std",
+                "cost_of_risk": 0.03,
+                "limit": None,
+                "confidence": 0.95,
+                "years": 0.25,
+                "currency": "EUR",
+                "hidden": hidden,
+                **changes,
+            }
+        )
+        _cache[key] = study(book, report_builder.compiled(arguments["every"]), settings), report_builder.facts(book)
+    return _cache[key]
+
+
+def texts(figure):
+    """Visible texts and their boxes in pixels; tick labels beyond the view limits are never drawn."""
+    unseen = set()
+    for axes in figure.axes:
+        for axis in (axes.xaxis, axes.yaxis):
+            low, high = sorted(axis.get_view_interval())
+            slack = 1e-9 * (high - low)
+            for tick in [*axis.get_major_ticks(), *axis.get_minor_ticks()]:
+                if not low - slack <= tick.get_loc() <= high + slack:
+                    unseen |= {tick.label1, tick.label2}
+    renderer = figure.canvas.get_renderer()
+    shown = [t for t in figure.findobj(Text) if t.get_visible() and t.get_text().strip() and t not in unseen]
+    return [(t, t.get_window_extent(renderer)) for t in shown]
+
+
+def faults(figure):
+    """Texts that leave the page or run into another."""
+    figure.canvas.draw()
+    found = []
+    width, height = figure.bbox.width, figure.bbox.height
+    boxes = texts(figure)
+    for text, box in boxes:
+        if box.x0 < 0 or box.y0 < 0 or box.x1 > width or box.y1 > height:
+            found.append(f"off the page: {text.get_text()!r}")
+        if text.get_gid() != "footer" and box.y0 < height * 11.5 / 210:
+            found.append(f"in the footer: {text.get_text()!r}")
+        if text.get_fontsize() < 8.5:
+            found.append(f"too small: {text.get_text()!r}")
+    # The box of a line reaches beyond its ink by the leading; a point of shared edge is no overlap.
+    x0, y0, x1, y1 = np.array([box.extents for _, box in boxes]).T
+    across = np.minimum.outer(x1, x1) - np.maximum.outer(x0, x0)
+    down = np.minimum.outer(y1, y1) - np.maximum.outer(y0, y0)
+    for a, b in np.argwhere(np.triu((across > 1.0) & (down > 2.0), k=1)):
+        found.append(f"overlap: {boxes[a][0].get_text()!r} and {boxes[b][0].get_text()!r}")
+    return found
+
+
+def sheets_of(kind, *, facts_changes=None, **changes):
+    """Pages of one kind of run, each with its faults."""
+    results, facts = made(kind, **changes)
+    facts = replace(facts, **(facts_changes or {}))
+    with report_style():
+        sheets = build(view_of(results, facts.ledger), facts, created=CREATED)
+        return sheets, [faults(sheet.figure) for sheet in sheets]
+
+
+@lru_cache
+def plain_sheets(kind):
+    return sheets_of(kind)
+
+
+@pytest.mark.parametrize("kind", KINDS)
+def test_no_text_is_clipped_or_overlaps(kind):
+    sheets, found = plain_sheets(kind)
+    assert [f"page {k}: {fault}" for k, page in enumerate(found, start=1) for fault in page] == []
+    assert all(len(texts(sheet.figure)) > 5 for sheet in sheets)
+
+
+def test_the_walker_sees_planted_faults():
+    sheets, _ = sheets_of("one schedule")
+    with report_style():
+        figure = sheets[0].figure
+        figure.text(0.5, 0.5, "one text", fontsize=9)
+        figure.text(0.5, 0.5, "another text", fontsize=9)
+        figure.text(0.98, 0.6, "a text that leaves the page", fontsize=9)
+        figure.text(0.3, 0.4, "fine print", fontsize=5)
+        found = faults(figure)
+    assert any("'one text' and 'another text'" in fault for fault in found)
+    assert any(fault.startswith("off the page: 'a text that") for fault in found)
+    assert "too small: 'fine print'" in found
+
+
+AWKWARD = {
+    "shortfall under a limit that none meets": ({"risk": "es975", "limit": 1.0}, {}),
+    "variance as risk": ({"risk": "variance", "cost_of_risk": 1e-6}, {}),
+    "mean of the total": ({"mean": "total"}, {}),
+    "costs only": ({"cost_of_risk": 0.0}, {}),
+    "everything tied": ({"confidence": 0.999999999}, {}),
+    "long texts": (
+        {},
+        {
+            "title": "A very long title of an experiment that a desk wrote in a hurry before the quarter-end review, "
+            * 3,
+            "experiment_name": "an_experiment_with_a_long_file_name_that_goes_on_and_on",
+            "cautions": tuple(
+                f"Caution {k}: this input was assumed and nobody has checked it against a quote yet, so beware."
+                for k in range(14)
+            ),
+            "book_lines": tuple(
+                f"CORVANE call, strike {k}, expiry 63d, quantity -500, multiplier 100, $mark$ 22 %" for k in range(160)
+            ),
+            "currency": "ZAR",
+        },
+    ),
+}
+
+
+@pytest.mark.parametrize("case", AWKWARD)
+@pytest.mark.parametrize("kind", ["ten schedules", "forty schedules"])
+def test_awkward_settings_and_texts_render_without_overlap(kind, case):
+    changes, facts_changes = AWKWARD[case]
+    _, found = sheets_of(kind, facts_changes=facts_changes, **changes)
+    assert [f"page {k}: {fault}" for k, page in enumerate(found, start=1) for fault in page] == []
+
+
+@pytest.mark.parametrize("scale", [1e-4, 1.0, 1e4, 1e9])
+def test_amounts_of_any_size_render_without_overlap(scale):
+    book = report_builder.scaled(report_builder.ledger([1, 2, 6, 21], paths=400), scale)
+    settings = Settings(
+        mean="costs", risk="std", cost_of_risk=0.03, limit=None, confidence=0.95, years=0.25, currency="EUR"
+    )
+    results, facts = study(book, report_builder.compiled([1, 2, 6, 21]), settings), report_builder.facts(book)
+    with report_style():
+        pages = [faults(sheet.figure) for sheet in build(view_of(results, book), facts, created=CREATED)]
+    assert [fault for page in pages for fault in page] == []
+
+
+def test_long_schedule_names_render_without_overlap():
+    names = (
+        "at the open and at the close",
+        "every 2 looks or when the delta is off by 5 %",
+        "every 6 looks",
+        "a rule with a name of remarkable length",
+    )
+    book = replace(report_builder.ledger([1, 2, 6, 21], paths=400), schedules=names)
+    compiled = replace(report_builder.compiled([1, 2, 6, 21]), names=names)
+    settings = Settings(
+        mean="costs", risk="std", cost_of_risk=0.03, limit=None, confidence=0.95, years=0.25, currency="EUR"
+    )
+    with report_style():
+        pages = [
+            faults(s.figure)
+            for s in build(view_of(study(book, compiled, settings), book), report_builder.facts(book), created=CREATED)
+        ]
+    assert [fault for page in pages for fault in page] == []
+
+
+def page_texts(folder):
+    """Text of each page of the PDF, white space evened out."""
+    return [re.sub(r"\s+", " ", page.extract_text()) for page in PdfReader(folder / "report.pdf").pages]
+
+
+@pytest.mark.parametrize("kind", ["ten schedules", "price history", "one inception"])
+def test_pdf_text_holds_the_finding_the_cautions_and_the_hash(tmp_path, kind):
+    results, facts = made(kind)
+    write_report(results, facts, tmp_path, created=CREATED)
+    pages = page_texts(tmp_path)
+    assert sentence(results) in pages[0]
+    assert CAUTION in pages[0]
+    assert all(facts.experiment_hash in page and "2027-03-01" in page for page in pages)
+    assert all(f"page {k} of {len(pages)}" in page for k, page in enumerate(pages, start=1))
+    whole = " ".join(pages)
+    assert all(
+        line in whole for line in (*facts.market_lines, *facts.book_lines, *facts.method_lines, f"seed: {facts.seed}")
+    )
+    assert all(digest in whole.replace(" ", "") for digest in facts.hashes.values())
+
+
+def test_pdf_has_a_title_a_subject_and_the_date_of_the_run(tmp_path):
+    results, facts = made("one schedule")
+    write_report(results, facts, tmp_path, created=CREATED)
+    about = PdfReader(tmp_path / "report.pdf").metadata
+    assert about.title == facts.title
+    assert sentence(results) in about.subject
+    assert about.creation_date == CREATED
+
+
+@pytest.mark.parametrize(
+    ("kind", "pages", "pictures"),
+    [("ten schedules", 9, 7), ("forty schedules", 10, 7), ("price history", 10, 8), ("one inception", 7, 5)],
+)
+def test_pages_and_pictures(tmp_path, kind, pages, pictures):
+    results, facts = made(kind)
+    written = write_report(results, facts, tmp_path, created=CREATED)
+    assert len(PdfReader(written[0]).pages) == pages
+    assert sorted(written[1:]) == sorted((tmp_path / "figures").glob("*.png"))
+    assert len(written) - 1 == pictures
+    assert written[0].stat().st_size < 3e6
+    assert all(path.read_bytes().startswith(b"\x89PNG") for path in written[1:])
+
+
+def test_same_run_gives_the_same_bytes_whatever_the_readers_settings(tmp_path):
+    import matplotlib
+
+    results, facts = made("ten schedules")
+    first = write_report(results, facts, tmp_path / "a", created=CREATED)
+    with matplotlib.rc_context({"font.size": 20, "axes.facecolor": "red", "pdf.fonttype": 3}):
+        second = write_report(results, facts, tmp_path / "b", created=CREATED)
+    assert [p.name for p in first] == [p.name for p in second]
+    assert all(a.read_bytes() == b.read_bytes() for a, b in zip(first, second, strict=True))
+
+
+def test_another_date_changes_the_pdf(tmp_path):
+    results, facts = made("one schedule")
+    first = write_report(results, facts, tmp_path / "a", created=CREATED)[0].read_bytes()
+    second = write_report(results, facts, tmp_path / "b", created=CREATED.replace(day=2))[0].read_bytes()
+    assert first != second
+
+
+@pytest.mark.parametrize("kind", ["ten schedules", "price history", "two underlyings"])
+def test_key_table_shows_the_figures_of_the_study(kind):
+    results, _ = made(kind)
+    sheets, _ = plain_sheets(kind)
+    cells = [t.get_text() for t in sheets[0].figure.texts if t.get_gid() == "cell"]
+    d, c = results.distribution, results.choice
+    for k, name in enumerate(results.schedules):
+        row = cells[cells.index(name) : cells.index(name) + 7]
+        assert row[2] == money(c.mean_cost[k])
+        assert row[3] == money_with_error(d.std[k], d.std_se[k])
+        assert row[4] == money(d.es975[k])
+        assert row[6] == money(c.objective[k])
+        share = results.variances.removable_share[k]
+        assert row[5].startswith(f"{100 * share:.1f} %")
+
+
+def test_marks_of_the_choice_stand_beside_the_right_schedules():
+    results, _ = made("ten schedules")
+    sheets, _ = plain_sheets("ten schedules")
+    cells = [t.get_text() for t in sheets[0].figure.texts if t.get_gid() == "cell"]
+    marked = {name: cells[cells.index(name) + 7] for name in results.schedules}
+    assert [n for n, m in marked.items() if "chosen" in m] == [results.schedules[results.choice.chosen]]
+    tied = {n for k, n in enumerate(results.schedules) if results.choice.tied[k] and k != results.choice.chosen}
+    assert {n for n, m in marked.items() if "tied" in m} == tied
+
+
+def test_stacked_variance_parts_add_up_to_the_variance_of_the_total():
+    results, facts = made("ten schedules")
+    view = view_of(results, facts.ledger)
+    sheets, _ = plain_sheets("ten schedules")
+    axes = next(s for s in sheets if s.name == "variance").figure.axes[0]
+    heights = np.array(
+        [[bar.get_height() for bar in group] for group in axes.containers if len(group) == len(view.names)]
+    )
+    np.testing.assert_allclose(heights.sum(axis=0), view.std**2, rtol=1e-6)
+
+
+def test_covariance_bars_add_up_to_the_whole():
+    sheets, _ = plain_sheets("two underlyings")
+    axes = next(s for s in sheets if s.name == "shares").figure.axes[0]
+    widths = np.array([[bar.get_width() for bar in group] for group in axes.containers])
+    # Parts below a thousandth of the largest are not drawn.
+    np.testing.assert_allclose(widths.sum(axis=0), 1.0, atol=5e-3)
+
+
+def test_exceedance_curve_is_the_share_of_larger_losses():
+    results, facts = made("ten schedules")
+    view = view_of(results, facts.ledger)
+    sheets, _ = plain_sheets("ten schedules")
+    axes = next(s for s in sheets if s.name == "distribution").figure.axes[1]
+    thickest = max(axes.lines, key=lambda line: line.get_linewidth())
+    losses = -facts.ledger.totals[view.rows[view.best]]
+    for x, p in np.column_stack(thickest.get_data())[::20]:
+        assert (losses >= x).mean() == pytest.approx(p)
+
+
+def test_history_pages_say_that_the_floor_is_unknown():
+    sheets, _ = plain_sheets("price history")
+    words = " ".join(t.get_text() for s in sheets for t in s.figure.texts)
+    assert "the floor is unknown" in words
+    assert any(s.name == "rolling" for s in sheets)
+
+
+def test_hidden_reference_schedule_appears_nowhere_but_as_reference():
+    sheets, _ = plain_sheets("price history, every look not asked for")
+    cells = [t.get_text() for s in sheets for t in s.figure.texts if t.get_gid() == "cell"]
+    assert "every look" not in cells
+    axes = next(s for s in sheets if s.name == "variance").figure.axes[0]
+    assert any("trading at every look" in t.get_text() for t in axes.get_legend().get_texts())
+
+
+def _linear(colour):
+    channel = np.array([int(colour[k : k + 2], 16) / 255 for k in (1, 3, 5)])
+    return np.where(channel <= 0.04045, channel / 12.92, ((channel + 0.055) / 1.055) ** 2.4)
+
+
+def _lab(linear):
+    xyz = np.array([[0.4124, 0.3576, 0.1805], [0.2126, 0.7152, 0.0722], [0.0193, 0.1192, 0.9505]]) @ linear
+    f = np.cbrt(np.maximum(xyz / np.array([0.9505, 1.0, 1.089]), 1e-6))
+    return np.array([116 * f[1] - 16, 500 * (f[0] - f[1]), 200 * (f[1] - f[2])])
+
+
+# Machado, Oliveira and Fernandes (2009), IEEE Transactions on Visualization and Computer Graphics 15, severity 1, on
+# linear RGB (from memory).
+_BLINDNESS = {
+    "none": np.eye(3),
+    "protan": np.array(
+        [[0.152286, 1.052583, -0.204868], [0.114503, 0.786281, 0.099216], [-0.003882, -0.048116, 1.051998]]
+    ),
+    "deutan": np.array(
+        [[0.367322, 0.860646, -0.227968], [0.280085, 0.672501, 0.047413], [-0.011820, 0.042940, 0.968881]]
+    ),
+}
+
+
+@pytest.mark.parametrize("sight", _BLINDNESS)
+def test_components_of_one_chart_can_be_told_apart(sight):
+    together = [
+        "premium_edge",
+        "revaluation",
+        "vol_gap",
+        "vol_mark",
+        "jump",
+        "sampling",
+        "lag",
+        "remainder",
+        "costs",
+        "funding",
+    ]
+    stack = ["floor", "removable", "costs"], ["reference", "removable", "costs"]
+    for names in (together, *stack):
+        seen = {n: _lab(np.clip(_BLINDNESS[sight] @ _linear(COMPONENT[n]), 0, 1)) for n in names}
+        for a, b in combinations(names, 2):
+            # Ten is several times the just noticeable difference of about 2.3 (Mahy et al. 1994, from memory).
+            assert math.dist(seen[a], seen[b]) > 10, (a, b)
+
+
+@pytest.mark.parametrize("count", [1, 2, 10, 40])
+def test_schedule_shades_darken_from_rare_to_frequent(count):
+    luminance = [float(np.array([0.2126, 0.7152, 0.0722]) @ _linear(shade)) for shade in schedule_shades(count)]
+    assert luminance == sorted(luminance, reverse=True)
+    assert len(set(schedule_shades(count))) == count
+    assert luminance[0] < 0.5  # legible on white
