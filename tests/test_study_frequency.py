@@ -1,5 +1,7 @@
 """The frequency law and the growth of costs."""
 
+from functools import cache
+
 import numpy as np
 import pytest
 from ledger_builder import HEDGED, build_ledger, compiled, hedge_calls
@@ -25,6 +27,14 @@ def lawful_ledger(seed, *, exponent=1.0, trades=TRADES, paths=2000, groups=64, n
     return build_ledger(detail, components=components, schedules=names, groups=groups, **options)
 
 
+@cache
+def lawful_laws(runs, exponent=1.0, groups=64, trades=TRADES):
+    return [
+        studied(lawful_ledger(seed, exponent=exponent, groups=groups, trades=trades), trades).law
+        for seed in range(runs)
+    ]
+
+
 def studied(ledger, trades=TRADES, *, hidden=(), settings=SETTINGS, **options):
     shown = np.array([i for i, name in enumerate(ledger.schedules) if name not in hidden])
     rules = compiled(ledger.schedules, trades, **options)
@@ -34,7 +44,7 @@ def studied(ledger, trades=TRADES, *, hidden=(), settings=SETTINGS, **options):
 @pytest.mark.parametrize("exponent", [1.0, 0.5])
 def test_exponent_interval_covers_the_truth_as_often_as_stated(exponent):
     runs = 400
-    laws = [studied(lawful_ledger(seed, exponent=exponent)).law for seed in range(runs)]
+    laws = lawful_laws(runs, exponent)
     covered = sum(law.low <= exponent <= law.high for law in laws)
     # 95 % of 400, four binomial standard deviations; the widening on a misfit at 1 % can only add cover.
     room = 4 * np.sqrt(runs * 0.95 * 0.05)
@@ -44,8 +54,36 @@ def test_exponent_interval_covers_the_truth_as_often_as_stated(exponent):
     assert stated == pytest.approx(spread, rel=0.17)  # 400 fits: 3.5 %, four of them, and 3 % for the widened ones
 
 
+def test_few_resamples_for_each_point_are_paid_for_in_the_interval():
+    # Three groups a point: without the small-sample factor the interval covers too seldom.
+    runs, trades = 400, (*TRADES, 256, 512)
+    laws = lawful_laws(runs, groups=24, trades=trades)
+    assert {law.weighting for law in laws} == {"joint"}
+    covered = sum(law.low <= 1.0 <= law.high for law in laws)
+    room = 4 * np.sqrt(runs * 0.95 * 0.05)
+    assert 0.95 * runs - room <= covered <= 0.95 * runs + room
+
+
+def test_a_misfit_widens_the_error_by_its_ratio():
+    trades = np.array([4.0, 8.0, 16.0, 64.0])
+    lawful = 7.0 * trades**-0.8
+    bent = lawful * np.array([1.0, 1.06, 1.06, 1.0])
+    noise = lawful * 0.01 * np.random.default_rng(1).standard_normal((64, 4)) / 8
+
+    def fit(removable):
+        points = Points(tuple("abcd"), trades, removable, removable + noise, 63 / 64)
+        return fit_power_law(points, confidence=0.95, reference=np.inf)[0]
+
+    straight, law = fit(lawful), fit(bent)
+    assert law.misfit
+    assert not straight.misfit
+    ratio = law.chi2 * 62 / (63 * 2)
+    # The straight fit carries the small-sample factor 63/61; the bend moves the gradients by a few percent.
+    assert law.exponent_se == pytest.approx(straight.exponent_se * np.sqrt(ratio * 61 / 63), rel=0.06)
+
+
 def test_lawful_points_are_seldom_called_a_misfit():
-    laws = [studied(lawful_ledger(seed)).law for seed in range(400)]
+    laws = lawful_laws(400, 1.0)
     # p-values below 1 %: four expected, binomial deviation 2.0.
     assert sum(law.misfit for law in laws) <= 12
     uniform = np.mean([law.p_value for law in laws])
@@ -54,7 +92,7 @@ def test_lawful_points_are_seldom_called_a_misfit():
 
 def test_many_schedules_on_few_groups_fall_back_to_single_weights_with_honest_errors():
     runs = 300
-    laws = [studied(lawful_ledger(seed, groups=16)).law for seed in range(runs)]
+    laws = lawful_laws(runs, groups=16)
     assert {law.weighting for law in laws} == {"single"}
     covered = sum(law.low <= 1.0 <= law.high for law in laws)
     room = 4 * np.sqrt(runs * 0.95 * 0.05)
@@ -91,9 +129,9 @@ def test_exact_points_give_the_exact_law():
     points = Points(("a", "b", "c", "d"), trades, removable, removable * noise, 63 / 64)
     law, reason = fit_power_law(points, confidence=0.95, reference=np.inf)
     assert reason == ""
-    assert law.exponent == pytest.approx(0.8, abs=1e-12)
-    assert law.coefficient == pytest.approx(7.0, rel=1e-12)
-    np.testing.assert_allclose(law.removable(trades), removable, rtol=1e-12)
+    assert law.exponent == pytest.approx(0.8, abs=1e-7)
+    assert law.coefficient == pytest.approx(7.0, rel=1e-6)
+    np.testing.assert_allclose(law.removable(trades), removable, rtol=1e-6)
     assert (law.removable_se(trades) > 0).all()
 
 
@@ -103,8 +141,8 @@ def test_exact_points_against_a_reference_give_the_exact_law():
     noise = 1 + 0.01 * np.random.default_rng(1).standard_normal((64, 4))
     points = Points(("a", "b", "c", "d"), trades, removable, removable * noise, 1 / 63)
     law, _ = fit_power_law(points, confidence=0.95, reference=128.0)
-    assert law.exponent == pytest.approx(0.8, abs=1e-9)
-    assert law.coefficient == pytest.approx(7.0, rel=1e-8)
+    assert law.exponent == pytest.approx(0.8, abs=1e-7)
+    assert law.coefficient == pytest.approx(7.0, rel=1e-6)
 
 
 def test_price_history_law_is_measured_against_every_look():
@@ -154,10 +192,27 @@ def test_too_few_points_give_a_reason_not_a_law():
     assert "needs 3 equal-interval schedules, 2 can be used" in f.reason
 
 
-def test_removable_hidden_in_noise_is_left_out():
-    ledger = lawful_ledger(4, trades=(4, 8, 16, 10**7), paths=2000)
-    law = studied(ledger, (4, 8, 16, 10**7), looks=64).law
-    assert dict(law.left_out) == {"s3": "removable variance within two standard errors of zero"}
+def test_points_lost_in_noise_neither_help_nor_harm():
+    trades = (4, 8, 16, 10**6, 10**7)
+    ledgers = [lawful_ledger(seed, trades=trades) for seed in range(40)]
+    assert min(variances(ledger, np.arange(5)).value.removable.min() for ledger in ledgers) < 0
+    laws = [studied(ledger, trades, looks=64).law for ledger in ledgers]
+    scores = np.array([(law.exponent - 1.0) / law.exponent_se for law in laws])
+    assert abs(scores.mean()) < 4 / np.sqrt(40)
+    assert (np.abs(scores) < 3).sum() >= 38
+
+
+def test_variance_that_does_not_fall_has_no_law():
+    flat = lawful_ledger(4, exponent=0.0)
+    f = studied(flat)
+    assert f.law is None
+    assert "does not fall" in f.reason
+
+
+def test_without_resamples_there_is_no_law():
+    f = studied(lawful_ledger(4, groups=0))
+    assert f.law is None
+    assert "fewer than eight resamples" in f.reason
 
 
 def test_schedules_without_a_clock_are_not_rows():

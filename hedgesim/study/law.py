@@ -3,6 +3,9 @@
 Points are correlated, since all schedules see the same paths; their covariance is estimated from the resamples of the
 ledger. Least squares with an estimated covariance is regression on the contrasts that the law says are zero, whose
 exact small-sample error is known: Rao (1967, Proc. Fifth Berkeley Symposium 1, from memory).
+
+The fit is to removable variance itself, not to its logarithm: where it is small beside the floor, its noise is that of
+Cov(discretisation, floor), which does not scale with the estimate, and weights in logs would favour high estimates.
 """
 
 from dataclasses import dataclass
@@ -10,7 +13,7 @@ from typing import Literal
 
 import numpy as np
 
-from hedgesim.market import Floats
+from hedgesim.market import Floats, frozen
 
 # Fewer resamples than this for each point leave the inverse of the estimated covariance useless.
 _RESAMPLES_PER_POINT = 3
@@ -51,12 +54,12 @@ class PowerLaw:
     low, high : confidence interval of p
     coefficient : c, in currency squared
     coefficient_se : standard error of c
-    log_covariance : covariance of the errors of (log c, p)
+    covariance : of the errors of (c, p)
     reference : M
     chi2, dof, p_value : squared distance of the points from the law in units of their joint error, its degrees of
         freedom, and the chance of one as large if the law held; nan when there are too few resamples to say
-    misfit : the points are off the law by more than their error; the errors above are then scaled up by
-        sqrt(chi2 / dof), as the law is asymptotic and the points are not
+    misfit : the points are off the law by more than their error, as the law is asymptotic and the points are not; the
+        variances above are then scaled up by the F ratio of the fit, chi2 / dof but for the small-sample correction
     weighting : `joint` with the full covariance of the points, `single` with their variances only
     points : schedules fitted
     left_out : schedules not fitted, each with the reason
@@ -69,7 +72,7 @@ class PowerLaw:
     high: float
     coefficient: float
     coefficient_se: float
-    log_covariance: Floats
+    covariance: Floats
     reference: float
     chi2: float
     dof: int
@@ -82,15 +85,14 @@ class PowerLaw:
 
     def removable(self, trades: Floats) -> Floats:
         """Removable variance at `trades` equal intervals over the life."""
-        return np.asarray(self.coefficient * (trades**-self.exponent - self.reference**-self.exponent))
+        shape, _ = _shape(np.asarray(trades, dtype=np.float64), self.exponent, self.reference)
+        return self.coefficient * shape
 
     def removable_se(self, trades: Floats) -> Floats:
         """Standard error of `removable` from the errors of the fit."""
-        far = self.reference**-self.exponent
-        log_far = np.log(self.reference) if np.isfinite(self.reference) else 0.0
-        by_exponent = self.coefficient * (far * log_far - trades**-self.exponent * np.log(trades))
-        gradient = np.stack([self.removable(trades), by_exponent])
-        variance = np.einsum("in,ij,jn->n", gradient, self.log_covariance, gradient)
+        shape, slope = _shape(np.asarray(trades, dtype=np.float64), self.exponent, self.reference)
+        gradient = np.stack([shape, self.coefficient * slope])
+        variance = np.einsum("in,ij,jn->n", gradient, self.covariance, gradient)
         return np.asarray(np.sqrt(np.maximum(variance, 0.0)))
 
 
@@ -138,43 +140,34 @@ def fit_power_law(
     if n < _FEWEST_POINTS:
         why = "".join(f"; {name}: {reason}" for name, reason in left_out)
         return None, f"a law needs {_FEWEST_POINTS} equal-interval schedules, {n} can be used{why}"
-    trades, log_removable = points.trades[kept], np.log(points.removable[kept])
-    resampled = np.log(points.resampled[:, kept])
-    resamples = len(resampled)
-    covariance = _covariance(resampled, points.factor)
+    resamples = len(points.resampled)
     joint = resamples >= _RESAMPLES_PER_POINT * n
-    inverse = np.asarray(np.linalg.pinv(covariance, hermitian=True) if joint else np.diag(1.0 / np.diag(covariance)))
-
-    log_c, p = _fit_logs(trades, log_removable, inverse, reference)
-    shape, slope = _shape(trades, p, reference)
-    design = np.stack([np.ones(n), slope], axis=1)
-    residual = log_removable - log_c - shape
-    solve = np.linalg.inv(design.T @ inverse @ design) @ design.T @ inverse
-    errors = solve @ covariance @ solve.T
+    fit = _least_squares(points, kept, reference=reference, joint=joint, free_floor=False)
+    if fit is None or fit.parameters[0] <= 0.0:
+        return None, "removable variance does not fall with the number of trades beyond its noise"
+    (coefficient, p), errors, chi2 = fit.parameters, fit.errors, fit.chi2
     freedom = resamples - 1.0
-    chi2, p_value, misfit = float("nan"), float("nan"), False
+    p_value, misfit = float("nan"), False
     if joint:
-        chi2 = float(residual @ inverse @ residual)
-        errors = errors * _small_sample(chi2, resamples, n, 2)
         freedom = resamples - 1.0 - (n - 2)
-        p_value = float(fdtrc(n - 2, freedom + 1.0, chi2 * (freedom + 1.0) / ((resamples - 1.0) * (n - 2))))
+        ratio = chi2 * (freedom + 1.0) / ((resamples - 1.0) * (n - 2))
+        p_value = float(fdtrc(n - 2, freedom + 1.0, ratio))
         misfit = p_value < _MISFIT_LEVEL
-        if misfit:
-            errors = errors * max(1.0, chi2 / (n - 2))
+        widening = _small_sample(chi2, resamples, n, 2)
+        errors = errors * (max(widening, ratio) if misfit else widening)
     exponent_se = float(np.sqrt(errors[1, 1]))
     half = float(stdtrit(freedom, 0.5 + 0.5 * confidence)) * exponent_se
-    coefficient = float(np.exp(log_c))
     return (
         PowerLaw(
-            exponent=p,
+            exponent=float(p),
             exponent_se=exponent_se,
-            low=p - half,
-            high=p + half,
-            coefficient=coefficient,
-            coefficient_se=coefficient * float(np.sqrt(errors[0, 0])),
-            log_covariance=errors,
+            low=float(p) - half,
+            high=float(p) + half,
+            coefficient=float(coefficient),
+            coefficient_se=float(np.sqrt(errors[0, 0])),
+            covariance=frozen(errors),
             reference=reference,
-            chi2=chi2,
+            chi2=chi2 if joint else float("nan"),
             dof=n - 2,
             p_value=p_value,
             misfit=misfit,
@@ -191,8 +184,6 @@ def _admit(points: Points, reference: float) -> tuple[list[int], tuple[tuple[str
     """Indices of the points that can be fitted, and the others with reasons."""
     kept: list[int] = []
     refused: list[tuple[str, str]] = []
-    resampled = points.resampled
-    error = np.sqrt(np.diag(_covariance(resampled, points.factor))) if len(resampled) >= 8 else None
     for i, name in enumerate(points.names):
         same = next((points.names[j] for j in kept if points.trades[j] == points.trades[i]), None)
         if points.trades[i] < 2:
@@ -201,20 +192,13 @@ def _admit(points: Points, reference: float) -> tuple[list[int], tuple[tuple[str
             refused.append((name, "is what removable variance is measured against"))
         elif same is not None:
             refused.append((name, f"as many intervals as {same}"))
-        elif error is None:
+        elif len(points.resampled) < 8:
             refused.append((name, "fewer than eight resamples, no standard error"))
-        elif not points.removable[i] > 2.0 * error[i] or not (resampled[:, i] > 0.0).all():
-            refused.append((name, "removable variance within two standard errors of zero"))
-        elif error[i] == 0.0:
+        elif np.ptp(points.resampled[:, i]) == 0.0:
             refused.append((name, "no spread over the resamples, no standard error"))
         else:
             kept.append(i)
     return kept, tuple(refused)
-
-
-def _covariance(values: Floats, factor: float) -> Floats:
-    centred = values - values.mean(axis=0)
-    return np.asarray(factor * centred.T @ centred)
 
 
 def _small_sample(chi2: float, resamples: int, points: int, parameters: int) -> float:
@@ -224,54 +208,61 @@ def _small_sample(chi2: float, resamples: int, points: int, parameters: int) -> 
 
 
 def _shape(trades: Floats, p: float, reference: float) -> tuple[Floats, Floats]:
-    """log(N^-p - M^-p) and its derivative by p."""
+    """N^-p - M^-p and its derivative by p."""
     own, far = trades**-p, reference**-p
     log_far = np.log(reference) if np.isfinite(reference) else 0.0
-    return np.log(own - far), (far * log_far - own * np.log(trades)) / (own - far)
+    return own - far, far * log_far - own * np.log(trades)
 
 
-def _fit_logs(trades: Floats, log_removable: Floats, inverse: Floats, reference: float) -> tuple[float, float]:
-    """The fit of log c and p by Gauss-Newton steps; linear, hence one step, when the reference is infinite."""
-    p = 1.0
-    for _ in range(50):
-        shape, slope = _shape(trades, p, reference)
-        design = np.stack([np.ones(len(trades)), slope], axis=1)
-        _, step = np.linalg.solve(design.T @ inverse @ design, design.T @ inverse @ (log_removable - shape))
-        step = float(np.clip(step, -0.5 * p, 2.0))
-        p += step
-        if abs(step) <= 1e-12 * p:
-            break
-    shape, _ = _shape(trades, p, reference)
-    row = inverse.sum(axis=0)
-    return float(row @ (log_removable - shape) / row.sum()), p
+@dataclass(frozen=True)
+class _Fit:
+    """Parameters (offset where free, c, p), their covariance at the weights used, and the squared distance."""
+
+    parameters: Floats
+    errors: Floats
+    chi2: float
+
+
+def _least_squares(points: Points, kept: list[int], *, reference: float, joint: bool, free_floor: bool) -> _Fit | None:
+    """Minimum over p of the distance at the best linear parameters; None when it lies on the edge of the range."""
+    from scipy.optimize import minimize_scalar
+
+    trades = points.trades[kept]
+    centred = points.resampled[:, kept] - points.resampled[:, kept].mean(axis=0)
+    # In units of their errors: removable variances span decades.
+    scale = np.sqrt(points.factor * np.square(centred).sum(axis=0))
+    correlation = points.factor * (centred / scale).T @ (centred / scale)
+    inverse = np.linalg.pinv(correlation, hermitian=True) if joint else np.eye(len(kept))
+    seen, level = points.removable[kept] / scale, 1.0 / scale
+
+    def linear(p: float) -> tuple[Floats, float]:
+        shape = _shape(trades, p, reference)[0] / scale
+        design = np.stack([level, shape] if free_floor else [shape], axis=1)
+        best = np.linalg.solve(design.T @ inverse @ design, design.T @ inverse @ seen)
+        residual = seen - design @ best
+        return np.asarray(best), float(residual @ inverse @ residual)
+
+    tried = np.geomspace(*_EXPONENT_RANGE, 40)
+    nearest = int(np.argmin([linear(p)[1] for p in tried]))
+    if nearest in (0, len(tried) - 1):
+        return None
+    bounds = (tried[nearest - 1], tried[nearest + 1])
+    p = float(minimize_scalar(lambda x: linear(x)[1], bounds=bounds, method="bounded", options={"xatol": 1e-12}).x)
+    best, chi2 = linear(p)
+    shape, slope = (x / scale for x in _shape(trades, p, reference))
+    gradient = np.stack([level, shape, best[-1] * slope] if free_floor else [shape, best[-1] * slope], axis=1)
+    solve = np.linalg.solve(gradient.T @ inverse @ gradient, gradient.T @ inverse)
+    return _Fit(np.append(best, p), np.asarray(solve @ correlation @ solve.T), chi2)
 
 
 def _free_floor(points: Points, kept: list[int]) -> Offset | None:
-    """Three-parameter fit; None when the squared distance has no minimum inside the range of exponents."""
-    from scipy.optimize import minimize_scalar
-
-    size, trades = points.removable[kept], points.trades[kept]
-    covariance = _covariance(points.resampled[:, kept] / size, points.factor)
-    inverse = np.linalg.pinv(covariance, hermitian=True)
-    ones = np.ones(len(kept))
-
-    def linear(p: float) -> tuple[Floats, float]:
-        design = np.stack([ones, trades**-p], axis=1) / size[:, None]
-        best = np.linalg.solve(design.T @ inverse @ design, design.T @ inverse @ ones)
-        residual = ones - design @ best
-        return np.asarray(best), float(residual @ inverse @ residual)
-
-    found = minimize_scalar(lambda p: linear(p)[1], bounds=_EXPONENT_RANGE, method="bounded", options={"xatol": 1e-9})
-    p = float(found.x)
-    if min(p - _EXPONENT_RANGE[0], _EXPONENT_RANGE[1] - p) < 1e-3:
+    fit = _least_squares(points, kept, reference=float("inf"), joint=True, free_floor=True)
+    if fit is None:
         return None
-    (offset, c), chi2 = linear(p)
-    power = trades**-p
-    design = np.stack([ones, power, -c * power * np.log(trades)], axis=1) / size[:, None]
-    errors = np.linalg.inv(design.T @ inverse @ design) * _small_sample(chi2, len(points.resampled), len(kept), 3)
+    errors = fit.errors * _small_sample(fit.chi2, len(points.resampled), len(kept), 3)
     return Offset(
-        value=float(offset),
+        value=float(fit.parameters[0]),
         value_se=float(np.sqrt(errors[0, 0])),
-        exponent=p,
+        exponent=float(fit.parameters[2]),
         exponent_se=float(np.sqrt(errors[2, 2])),
     )
