@@ -74,8 +74,8 @@ def greeks(
     with np.errstate(divide="ignore", invalid="ignore"):
         d1 = np.log(forward / k) / root + 0.5 * root
     settled = root <= 0
-    d1 = np.where(settled, np.sign(forward - k) * np.inf, d1)
-    d1 = np.where(settled & (forward == k), 0.0, d1)
+    edge = np.where(forward > k, np.inf, np.where(forward < k, -np.inf, 0.0))
+    d1 = np.where(settled, edge, d1)
     d2 = d1 - root
     value = sign * discount * (forward * ndtr(sign * d1) - k * ndtr(sign * d2))
     carry = np.exp((b - r) * tau)

@@ -85,9 +85,8 @@ def hedged_short_call(index: pd.DataFrame, every: int) -> pd.DataFrame:
                 cash = cash + spot * wanted - strike * np.exp(-RATE * tau) * ndtr(d1 - root)
         if day % every == 0 or day == LIFE:
             trade = wanted - held
-            # No ticket for a trade below 1e-12 of the book's units: the delta of a call that is all but worthless.
-            trade = trade.where(trade.abs() > 1e-12, 0.0)
-            cost = HALF_SPREAD * trade.abs() * spot + PER_UNIT * trade.abs() + PER_TRADE * (trade != 0)
+            # No ticket for a trade below 1e-9 of the book's units: the delta of a call that is all but worthless.
+            cost = HALF_SPREAD * trade.abs() * spot + PER_UNIT * trade.abs() + PER_TRADE * (trade.abs() > 1e-9)
             cash = cash - trade * spot - cost
             costs = costs + cost * np.exp(-RATE * day / 252)
             held = held + trade

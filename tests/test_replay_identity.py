@@ -55,7 +55,7 @@ def test_kernel_agrees_with_the_plain_twin_component_by_component(seed, remark, 
             for c, name in enumerate(COMPONENTS):
                 assert ledger.detail[k, :, c, n] == pytest.approx(told.components[name][:, -1], rel=1e-9, abs=limit)
             assert ledger.totals[k, n] == pytest.approx(told.components["total"][:, -1].sum(), rel=1e-9, abs=limit)
-            assert ledger.trades_detail[k, n] == np.count_nonzero(told.trade)
+            assert ledger.trades_detail[k, n] == np.count_nonzero(told.ticket)
             notional = (np.abs(told.trade) * life.price * np.exp(-life.market.rate * life.grid.t)).sum()
             assert ledger.turnover_detail[k, n] == pytest.approx(notional, rel=1e-10)
 

@@ -15,6 +15,7 @@ from hedgesim.book import Book, exposure, premium_received
 from hedgesim.costs import CostTerms
 from hedgesim.engine.ledger import COST_COMPONENTS, Ledger, Moments, Replicates, Watch
 from hedgesim.kernels.moments import comoments
+from hedgesim.kernels.replay import SMALLEST_TRADE
 from hedgesim.kernels.simulate import (
     DAY_ROWS,
     PATH_ROWS,
@@ -132,6 +133,7 @@ def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, s
         price_factor=np.exp(np.outer(market.growth - market.rate, grid.t)),
         discount=discount,
         initial=np.asarray(book.initial_units, dtype=np.float64),
+        smallest=SMALLEST_TRADE * (np.abs(book.initial_units) + [np.abs(book.units[j]).sum() for j in of]),
         schedules=len(compiled.names),
         count_units=bool((costs.per_unit != 0).any()),
     )

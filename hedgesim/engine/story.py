@@ -10,12 +10,10 @@ import numpy as np
 from hedgesim.book import Book, premium_received
 from hedgesim.costs import CostTerms
 from hedgesim.engine.ledger import COST_COMPONENTS, Story
+from hedgesim.kernels.replay import SMALLEST_TRADE
 from hedgesim.market import Flags, Floats, Ints, LookGrid, Market, frozen
 from hedgesim.pricing import Greeks, greeks
 from hedgesim.schedules import Compiled
-
-# Part of the units in the book below which a trade is no trade: the twin of the constant in `kernels.replay`.
-_SMALLEST_TRADE = 1e-12
 
 
 @dataclass(frozen=True)
@@ -29,12 +27,14 @@ class LookByLook:
     hedge : (underlying, look): units held after the look
     target : (underlying, look): the hedge that the reference delta asks for, minus the delta; zero at the last look
     trade : (underlying, look): units bought at the look
+    ticket : (underlying, look): the trade is more than rounding, and counted
     """
 
     components: dict[str, Floats]
     hedge: Floats
     target: Floats
     trade: Floats
+    ticket: Flags
 
 
 def story(
@@ -147,9 +147,8 @@ def look_by_look(
     target[:, :-1] = -slope[:, :-1] / weight
     delivered = _delivered(book, market, look, final)
     gross_units = np.abs(book.initial_units) + _by_underlying(np.abs(book.units)[:, None], book, market)[:, 0]
-    held, trade = _hedge(
-        target, delivered, compiled.trades_at[schedule_index], book.initial_units, _SMALLEST_TRADE * gross_units
-    )
+    held, trade = _hedge(target, delivered, compiled.trades_at[schedule_index], book.initial_units)
+    ticket = np.abs(trade) > SMALLEST_TRADE * gross_units[:, None]
 
     model = -premium_received(book, market)
     fair = scale[:, 0] * with_mark.value[:, 0]
@@ -171,7 +170,7 @@ def look_by_look(
     kinds = (
         costs.half_spread[:, None] * size * price,
         costs.per_unit[:, None] * size,
-        costs.per_trade[:, None] * (size > 0.0),
+        costs.per_trade[:, None] * ticket,
     )
     for name, kind in zip(COST_COMPONENTS, kinds, strict=True):
         parts[name] = -np.cumsum(discount * kind, axis=1)
@@ -179,7 +178,7 @@ def look_by_look(
     paid = _by_underlying(model[:, None], book, market)
     wealth = at_mark - paid + _cash_flows(market, grid, price, held, trade, delivered, book.initial_units)
     parts["total"] = wealth - np.cumsum(discount * np.sum(kinds, axis=0), axis=1)
-    return LookByLook(components=parts, hedge=held, target=target, trade=trade)
+    return LookByLook(components=parts, hedge=held, target=target, trade=trade, ticket=ticket)
 
 
 def _by_underlying(rows: Floats, book: Book, market: Market) -> Floats:
@@ -216,18 +215,15 @@ def _delivered(book: Book, market: Market, look: Ints, final: Floats) -> Floats:
     return _by_underlying(np.where(look == book.expiry_look[:, None], units[:, None], 0.0), book, market)
 
 
-def _hedge(
-    target: Floats, delivered: Floats, trades_at: Flags, initial: Floats, smallest: Floats
-) -> tuple[Floats, Floats]:
-    """Units held after each look, and units bought at it; nothing is bought where less than `smallest` is wanted."""
+def _hedge(target: Floats, delivered: Floats, trades_at: Flags, initial: Floats) -> tuple[Floats, Floats]:
+    """Units held after each look, and units bought at it."""
     held, trade = np.zeros_like(target), np.zeros_like(target)
     now = initial.astype(np.float64)
     for i, trades in enumerate(trades_at):
         now = now + delivered[:, i]
         if trades:
-            wanted = target[:, i] - now
-            trade[:, i] = np.where(np.abs(wanted) > smallest, wanted, 0.0)
-            now = np.where(trade[:, i] != 0.0, target[:, i], now)
+            trade[:, i] = target[:, i] - now
+            now = target[:, i]
         held[:, i] = now
     return held, trade
 

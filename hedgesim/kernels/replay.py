@@ -21,9 +21,9 @@ Flags = NDArray[np.bool_]
 PREMIUM_EDGE, REVALUATION, VOL_GAP_SEEN, VOL_MARK, LAG, REMAINDER, SPREAD, COMMISSION, TICKETS = range(9)
 COMPONENT_ROWS = 9
 
-# A trade below this part of the units in the book is no trade and needs no ticket: a delivery that closes the hedge
+# A trade below this part of the units in the book needs no ticket and is not counted: a delivery that closes the hedge
 # leaves rounding of this size, and so do deltas of options that are all but worthless.
-SMALLEST_TRADE = 1e-12
+SMALLEST_TRADE = 1e-9
 
 
 class Terms(NamedTuple):
@@ -284,19 +284,20 @@ def replay_inceptions(first: int, last: int, terms: Terms, out: Results) -> None
                         target = -book[3, u] / weight
                     if terms.trades_at[k, offset + look]:
                         trade = target - held[k, u]
-                        if abs(trade) > SMALLEST_TRADE * scale[u]:
-                            held[k, u] = target
-                            size = abs(trade)
-                            spread = terms.half_spread[u] * size * spot
-                            commission = terms.per_unit[u] * size
-                            account[k, u] -= spread + commission + terms.per_trade[u]
-                            if not terms.is_future[u]:
-                                account[k, u] -= trade * spot
-                            out.components[k, u, SPREAD, n] -= discount * spread
-                            out.components[k, u, COMMISSION, n] -= discount * commission
+                        held[k, u] = target
+                        size = abs(trade)
+                        spread = terms.half_spread[u] * size * spot
+                        commission = terms.per_unit[u] * size
+                        account[k, u] -= spread + commission
+                        if not terms.is_future[u]:
+                            account[k, u] -= trade * spot
+                        out.components[k, u, SPREAD, n] -= discount * spread
+                        out.components[k, u, COMMISSION, n] -= discount * commission
+                        out.turnover[k, n] += discount * size * spot
+                        if size > SMALLEST_TRADE * scale[u]:
+                            account[k, u] -= terms.per_trade[u]
                             out.components[k, u, TICKETS, n] -= discount * terms.per_trade[u]
                             out.trades[k, n] += 1.0
-                            out.turnover[k, n] += discount * size * spot
                     gap += abs(held[k, u] - target) * spot
                     at_mark += discount * account[k, u] + book[0, u] - settled[u]
                     if not terms.is_future[u]:

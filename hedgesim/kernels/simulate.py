@@ -58,6 +58,7 @@ class Hedging(NamedTuple):
     price_factor : (underlying, look) exp((b - r) t): X times it is the price discounted at r
     discount : (look,) exp(-r t)
     initial : (underlying,) units held before the inception
+    smallest : (underlying,) fewer units than this cost no ticket: they are rounding, not a trade
     schedules : their number
     count_units : keep the row that only per-unit costs need
     """
@@ -69,6 +70,7 @@ class Hedging(NamedTuple):
     price_factor: Floats
     discount: Floats
     initial: Floats
+    smallest: Floats
     schedules: int
     count_units: bool
 
@@ -142,6 +144,7 @@ def _trade(
     delivered: Floats,
     y: Floats,
     price: Floats,
+    smallest: float,
     hedge: Floats,
     gain: Floats,
     turnover: Floats,
@@ -149,7 +152,7 @@ def _trade(
 ) -> int:
     """Set the hedge to `target`; units handed over by settling options count as bought, but cost nothing.
 
-    Returns how many paths had nothing to trade; `traded` is set to the absolute units.
+    Returns how many paths had no more than `smallest` to trade; `traded` is set to the absolute units.
     """
     idle = 0
     for p in range(len(target)):
@@ -159,7 +162,7 @@ def _trade(
         size = abs(bought - delivered[p])
         turnover[p] = fma(size, price[p], turnover[p])
         traded[p] = size
-        idle += size == 0.0
+        idle += size <= smallest
     return idle
 
 
@@ -285,6 +288,7 @@ def run_chunk(
                 lookup(book.slope, u, i, log_x[u], cell, part, slope[u], gamma[u])
                 factor = hedging.price_factor[u, i]
                 unwind = -hedging.inverse_weight[u, i]
+                smallest = hedging.smallest[u]
                 for p in range(lanes):
                     gamma[u, p] *= x[u, p]
                     target[u, p] = unwind * slope[u, p]
@@ -292,13 +296,13 @@ def run_chunk(
                 for k in range(hedging.first[i], hedging.first[i + 1]):
                     s = hedging.who[k]
                     mine = trades[s, u]
-                    idle = _trade(target[u], delivered[u], y[u], price[u], hedge[s, u], mine[0], mine[1], one)
+                    idle = _trade(target[u], delivered[u], y[u], price[u], smallest, hedge[s, u], mine[0], mine[1], one)
                     if hedging.count_units:
                         for p in range(lanes):
                             mine[2, p] = fma(one[p], hedging.discount[i], mine[2, p])
                     if idle > 0:
                         for p in range(lanes):
-                            if one[p] == 0.0:
+                            if one[p] <= smallest:
                                 mine[3, p] += 1.0
                                 mine[4, p] += hedging.discount[i]
                 if settles:
