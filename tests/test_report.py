@@ -62,7 +62,7 @@ def made(kind, **changes):
 def texts(figure):
     """Visible texts and their boxes in pixels; tick labels beyond the view limits are never drawn."""
     unseen = set()
-    for axes in figure.axes:
+    for axes in [*figure.axes, *(inset for outer in figure.axes for inset in outer.child_axes)]:
         for axis in (axes.xaxis, axes.yaxis):
             low, high = sorted(axis.get_view_interval())
             slack = 1e-9 * (high - low)
@@ -270,8 +270,10 @@ def test_key_table_shows_the_figures_of_the_study(kind):
         assert row[3] == money_with_error(d.std[k], d.std_se[k])
         assert row[4] == money(d.es975[k])
         assert row[6] == money(c.objective[k])
-        share = results.variances.removable_share[k]
-        assert row[5].startswith(f"{100 * share:.1f} %")
+        shown, error = re.fullmatch(r"(-?[0-9.]+) % \(\u00b1([0-9.]+) %\)", row[5]).groups()
+        half = 0.5 * 10.0 ** -len(shown.partition(".")[2]) * (1 + 1e-9)
+        assert float(shown) == pytest.approx(100 * results.variances.removable_share[k], abs=half)
+        assert float(error) == pytest.approx(100 * results.variances.removable_share_se[k], abs=half)
 
 
 def test_marks_of_the_choice_stand_beside_the_right_schedules():

@@ -84,68 +84,98 @@ def stack_title(view: View) -> str:
 
 
 def variance_stack(axes: Axes, view: View, *, currency: str, width_mm: float) -> None:
-    """Stacked bars of the floor, removable and cost parts of the variance; negative parts hang below zero."""
+    """Stacked bars of the floor, removable and cost parts of the variance; negative parts hang below zero.
+
+    Where rare schedules dwarf the others, these are drawn again, enlarged, in the room above them.
+    """
     rows = view.pick(40)
     replayed = math.isfinite(view.reference_gross)
-    floor = np.full(len(rows), view.reference_gross) if replayed else view.floor[rows]
-    parts = [
-        (
-            floor,
-            "reference" if replayed else "floor",
-            "gross, trading at every look" if replayed else "floor: no schedule removes it",
-        ),
-        (view.removable[rows], "removable", "removable by trading more" if not replayed else "gross beyond every look"),
-        (view.total[rows] - view.gross[rows], "costs", "costs and their covariance with gross"),
-    ]
-    x = np.arange(len(rows))
-    up, down = np.zeros(len(rows)), np.zeros(len(rows))
-    for values, key, _ in parts:
-        values = np.nan_to_num(values)
-        bottom = np.where(values >= 0, up, down)
-        axes.bar(x, values, 0.62, bottom=bottom, color=style.COMPONENT[key], edgecolor=style.PAPER, linewidth=0.4)
-        up, down = up + np.clip(values, 0, None), down + np.clip(values, None, 0)
-    axes.scatter(
-        x, view.total[rows], marker="_", s=150 if len(rows) < 20 else 40, color=style.INK, zorder=4, linewidths=1.6
-    )
-    spread = view.total_se[rows]
-    axes.errorbar(
-        x, view.total[rows], yerr=np.nan_to_num(spread), fmt="none", ecolor=style.INK, elinewidth=0.9, zorder=4
-    )
-    axes.axhline(0, color=style.QUIET, lw=0.7)
-    top = float(np.nanmax(np.concatenate([up, view.total[rows] + np.nan_to_num(spread)])))
-    low = float(min(down.min(), 0.0))
-    top = top if top > 0 else 1.0
-    if (
-        len(rows) <= _MOST_NAMES
-        and max(text_width(money(s), style.CHART) for s in view.std[rows]) < width_mm / len(rows) - 1
-    ):
-        for k, r in enumerate(rows):
-            if math.isfinite(view.std[r]):
-                y = max(up[k], view.total[r] + np.nan_to_num(spread[k]))
-                axes.annotate(
-                    money(view.std[r]),
-                    (k, y),
-                    (0, 4),
-                    textcoords="offset points",
-                    ha="center",
-                    fontsize=style.CHART,
-                    gid="annotation",
-                )
-        note = "above the bars: std of P&L"
-    else:
-        note = ""
-    axes.set_ylim(low * 1.08, low * 1.08 + (top - low * 1.08) * 1.12)
-    axes.set_xlim(*centred(len(rows)))
-    scale, letter = style.unit_of(np.sqrt(np.array([top])))
+    labels = {
+        "reference": "gross, trading at every look",
+        "floor": "floor: no schedule removes it",
+        "removable": "gross beyond every look" if replayed else "removable by trading more",
+        "costs": "costs and their covariance with gross",
+    }
+    del labels["floor" if replayed else "reference"]
+    ends = _stacked_bars(axes, view, rows)
+    written = _write_stds(axes, view, rows, ends, width_mm)
+    scale, letter = style.unit_of(np.sqrt(np.array([axes.get_ylim()[1]])))
     style.plain_axis(axes.yaxis, scale**2)
     axes.set_ylabel(f"variance of P&L, ({currency} {letter})\u00b2".replace(" )", ")"))
-    axes.set_xlabel("schedule, rare to frequent" + (f"; {note}" if note else ""))
+    axes.set_xlabel("schedule, rare to frequent" + ("; above the bars: std of P&L" if written else ""))
     name_ticks(axes, view, rows, width_mm)
-    handles: list[Line2D | Patch] = [Patch(color=style.COMPONENT[key], label=label) for _, key, label in parts]
+    handles: list[Line2D | Patch] = [Patch(color=style.COMPONENT[key], label=label) for key, label in labels.items()]
     handles.append(
         Line2D([], [], color=style.INK, marker="_", ls="none", ms=9, mew=1.6, label="variance of P&L \u00b1 1 se")
     )
     legend_below(axes, handles, columns=2, drop=ticks_depth(view, rows, width_mm) + 8.0)
+    _enlarge(axes, view, rows, ends, width_mm)
+
+
+def _stacked_bars(axes: Axes, view: View, rows: Sequence[int]) -> Floats:
+    """Draw the parts and set the limits; the upper end of each bar with its error comes back."""
+    rows = list(rows)
+    if math.isfinite(view.reference_gross):
+        parts = [("reference", np.full(len(rows), view.reference_gross))]
+    else:
+        parts = [("floor", view.floor[rows])]
+    parts += [("removable", view.removable[rows]), ("costs", view.total[rows] - view.gross[rows])]
+    x, total = np.arange(len(rows)), view.total[rows]
+    up, down = np.zeros(len(rows)), np.zeros(len(rows))
+    for key, known in parts:
+        values = np.nan_to_num(known)
+        bottom = np.where(values >= 0, up, down)
+        axes.bar(x, values, 0.62, bottom=bottom, color=style.COMPONENT[key], edgecolor=style.PAPER, linewidth=0.4)
+        up, down = up + np.clip(values, 0, None), down + np.clip(values, None, 0)
+    error = np.nan_to_num(view.total_se[rows])
+    size = 150 if len(rows) < 20 else 40
+    axes.scatter(x, total, marker="_", s=size, color=style.INK, zorder=4, linewidths=1.6)
+    axes.errorbar(x, total, yerr=error, fmt="none", ecolor=style.INK, elinewidth=0.9, zorder=4)
+    axes.axhline(0, color=style.QUIET, lw=0.7)
+    ends = np.maximum(up, np.nan_to_num(total) + error)
+    top, low = float(ends.max()) or 1.0, 1.08 * float(down.min())
+    axes.set_ylim(low, low + (top - low) * 1.12)
+    axes.set_xlim(*centred(len(rows)))
+    return ends
+
+
+def _write_stds(axes: Axes, view: View, rows: Sequence[int], ends: Floats, width_mm: float) -> bool:
+    """Standard deviations above the bars, where all of them have room."""
+    widest = max(text_width(money(view.std[r]), style.CHART) for r in rows)
+    if len(rows) > _MOST_NAMES or widest > width_mm / max(len(rows), 4) - 1:
+        return False
+    for k, r in enumerate(rows):
+        axes.annotate(
+            money(view.std[r]),
+            (k, ends[k]),
+            (0, 4),
+            textcoords="offset points",
+            ha="center",
+            fontsize=style.CHART,
+            gid="annotation",
+        )
+    return True
+
+
+def _enlarge(axes: Axes, view: View, rows: Sequence[int], ends: Floats, width_mm: float) -> None:
+    """The last bars again on their own scale, when they are so low that nothing of them shows."""
+    n, height = len(rows), axes.get_ylim()[1]
+    first = next((k for k in range(1, n) if ends[k:].max() < 0.25 * height), n)
+    small = list(rows[first:])
+    if len(small) < 2 or n > _MOST_NAMES or axes.get_ylim()[0] < -0.02 * height:
+        return
+    left = (first - 0.5 - axes.get_xlim()[0]) / (axes.get_xlim()[1] - axes.get_xlim()[0])
+    left = max(left, 0.2) + 0.13
+    inset = axes.inset_axes((left, 0.47, 1.0 - left, 0.46))
+    _stacked_bars(inset, view, small)
+    inset.set_xlim(-0.6, len(small) - 0.4)
+    scale, _ = style.unit_of(np.sqrt(np.array([axes.get_ylim()[1]])))
+    style.plain_axis(inset.yaxis, scale**2, ticks=4)
+    if _tick_room(view, small, width_mm * (1.0 - left) * len(small) / max(len(small), 4))[2]:
+        inset.set_xticks(range(len(small)), [""] * len(small))
+    else:
+        name_ticks(inset, view, small, width_mm * (1.0 - left))
+    inset.set_title(f"the last {len(small)}, enlarged", fontsize=style.CHART, color=style.QUIET, loc="right", pad=5)
 
 
 def law_title(view: View) -> str:

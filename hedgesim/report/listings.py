@@ -17,6 +17,11 @@ def new_sheet(view: View, facts: RunFacts, name: str, title: str) -> Sheet:
     return Sheet(name, title, source_line(view, facts), facts.title)
 
 
+def all_cautions(view: View, facts: RunFacts) -> tuple[str, ...]:
+    """The standing caution, the caller's and the study's, each once."""
+    return tuple(dict.fromkeys((CAUTION, *facts.cautions, *view.warnings)))
+
+
 def root(variance: float) -> float:
     """Standard deviation of a variance; nan for one estimated below zero."""
     return math.sqrt(variance) if variance >= 0 else math.nan
@@ -74,23 +79,23 @@ def inputs(view: View, facts: RunFacts) -> list[Sheet]:
         ("Book", facts.book_lines),
         ("Method", facts.method_lines),
         ("Sample", (source_line(view, facts), f"seed: {seed}")),
-        ("Cautions", (CAUTION, *facts.cautions, *view.warnings)),
+        ("Cautions", all_cautions(view, facts)),
         ("Versions", tuple(f"{k} {v}" for k, v in facts.versions.items())),
         ("Hashes", tuple(f"{k}: {v}" for k, v in facts.hashes.items())),
     ]
     half = (TEXT_WIDTH_MM - GUTTER_MM) / 2
-    lines: list[tuple[str, bool]] = []
+    lines: list[tuple[str, bool, int]] = []
     for heading, body in blocks:
         if body:
-            lines.append((heading, True))
+            lines.append((heading, True, 2))
             for entry in body:
-                lines += [(part, False) for part in wrap(entry, half, 9.0)]
-            lines.append(("", False))
+                parts = wrap(entry, half, 9.0)
+                lines += [(part, False, min(len(parts) - k, 4)) for k, part in enumerate(parts)]
+            lines.append(("", False, 1))
     sheets: list[Sheet] = []
     step, column, y = line_height(9.0), 2, 0.0
-    for k, (text, is_heading) in enumerate(lines):
-        needs = step * (2 if is_heading and k + 1 < len(lines) else 1)
-        if column == 2 or y + needs > BOTTOM_MM:
+    for text, is_heading, together in lines:
+        if column == 2 or y + step * together > BOTTOM_MM:
             column = (column + 1) % 2 if column != 2 else 0
             if column == 0:
                 sheets.append(

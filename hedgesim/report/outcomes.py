@@ -229,7 +229,9 @@ def story_title(story: Story, currency: str) -> str:
     largest = max(end, key=lambda k: abs(end[k]), default="")
     verb = "earns" if total >= 0 else "loses"
     tail = f"; the largest part is {style.words(largest)}, {money(end[largest], currency=currency)}" if largest else ""
-    return f"{style.start(story.label)}: {story.schedule} {verb} {money(abs(total), currency=currency)}{tail}"
+    return (
+        f"{style.start(story.label)}. {style.start(story.schedule)} {verb} {money(abs(total), currency=currency)}{tail}"
+    )
 
 
 def story_price(axes: Axes, story: Story, marks: Sequence[OptionMark], names: Sequence[str], *, currency: str) -> None:

@@ -6,10 +6,10 @@ from collections.abc import Sequence
 import numpy as np
 
 from hedgesim.report import figures, outcomes, style, tradeoff
-from hedgesim.report.facts import CAUTION, RunFacts
-from hedgesim.report.listings import GUTTER_MM, count, inputs, new_sheet, root, schedule_tables
+from hedgesim.report.facts import RunFacts
+from hedgesim.report.listings import GUTTER_MM, all_cautions, count, inputs, new_sheet, root, schedule_tables
 from hedgesim.report.sheet import BOTTOM_MM, MARGIN_MM, TEXT_WIDTH_MM, Column, Sheet, line_height, wrap
-from hedgesim.report.view import View, mark_of
+from hedgesim.report.view import Share, View, mark_of
 from hedgesim.study.money import money, money_with_error, percent
 
 _FIRST_PAGE_ROWS = 12
@@ -19,7 +19,7 @@ def finding(view: View, facts: RunFacts) -> list[Sheet]:
     """The one sentence, the key table, what the cost of risk means, and the cautions."""
     sheet = new_sheet(view, facts, "finding", view.sentence)
     rows = _closest(view, _FIRST_PAGE_ROWS)
-    cautions = (CAUTION, *facts.cautions, *view.warnings)
+    cautions = all_cautions(view, facts)
     small = style.BODY - 0.5
     lines = [wrap(f"- {text}", TEXT_WIDTH_MM, small) for text in cautions]
     kept, used = 0, 0.0
@@ -143,7 +143,6 @@ def shares(view: View, facts: RunFacts) -> list[Sheet]:
     sheet = new_sheet(
         view, facts, "shares", "Where the variance of P&L comes from" if view.varied else "Where the P&L comes from"
     )
-    by_underlying = [s for s in view.shares if s.underlying != "all" and np.isfinite(s.mean[view.best])]
     names = list(dict.fromkeys(s.underlying for s in view.shares if s.underlying != "all"))
     table_width = 104.0
     width = TEXT_WIDTH_MM - table_width - GUTTER_MM
@@ -156,13 +155,13 @@ def shares(view: View, facts: RunFacts) -> list[Sheet]:
         left,
         y,
         table_width,
-        _share_columns([s for s in view.shares if s.underlying == "all"], view.best),
+        _share_columns(_worth_showing(view, "all"), view.best),
         size=9.0,
         row_height=5.0,
     )
     room = int((BOTTOM_MM - y - 22) / 5.0)
     if len(names) > 1 and room > 2:
-        rows = [s for s in by_underlying if "." not in s.component and (s.mean[view.best] != 0 or s.std[view.best] > 0)]
+        rows = [s for name in names for s in _worth_showing(view, name) if "." not in s.component]
         totals = [s for s in rows if s.component == "total"]
         shown = rows if len(rows) <= room else totals[:room]
         y = sheet.text(left, y + 4, "The same by underlying", size=style.CHART_TITLE, bold=True) + 1.0
@@ -177,13 +176,28 @@ def shares(view: View, facts: RunFacts) -> list[Sheet]:
     return [sheet]
 
 
-def _share_columns(rows: Sequence, best: int) -> list[Column]:  # type: ignore[type-arg]
+def _worth_showing(view: View, underlying: str) -> list[Share]:
+    """Rows of the breakdown that are not zero; cost kinds only when there are several."""
+    best = view.best
+    rows = [s for s in view.shares if s.underlying == underlying]
+    rows = [s for s in rows if s.component == "total" or s.mean[best] != 0.0 or s.std[best] > 0.0]
+    kinds = sum("." in s.component for s in rows)
+    return [s for s in rows if "." not in s.component or kinds > 1]
+
+
+def _share_columns(rows: Sequence[Share], best: int) -> list[Column]:
+    noise = 1e-9 * max((float(np.nan_to_num(s.std[best])) for s in rows), default=0.0)
     return [
         Column("component", [style.words(s.component) for s in rows], "left"),
-        Column("mean \u00b1 1 se", [money_with_error(s.mean[best], s.mean_se[best]) for s in rows]),
-        Column("std", [money(s.std[best]) for s in rows]),
+        Column("mean \u00b1 1 se", [_beyond_rounding(s.mean[best], s.mean_se[best]) for s in rows]),
+        Column("std", [money(0.0 if s.std[best] < noise else s.std[best]) for s in rows]),
         Column("share", [percent(s.share[best]) for s in rows]),
     ]
+
+
+def _beyond_rounding(value: float, error: float) -> str:
+    """A mean with its error; one that is the same on every path has an error of rounding only, which says nothing."""
+    return money(value) if error < 1e-9 * abs(value) else money_with_error(value, error)
 
 
 def distribution(view: View, facts: RunFacts) -> list[Sheet]:
@@ -288,8 +302,8 @@ def stories(view: View, facts: RunFacts) -> list[Sheet]:
         marks = facts.marks[k] if k < len(facts.marks) else ()
         sheet = new_sheet(view, facts, f"path_{k + 1}", outcomes.story_title(story, facts.currency))
         middle = sheet.top + (BOTTOM_MM - sheet.top) * 0.45
-        faint = " (faint: strikes until expiry, expiries dotted)" if marks else ""
-        price = sheet.chart(MARGIN_MM, sheet.top, half, middle, f"Price of path {story.path}{faint}", pad=(19, 3))
+        faint = ", strikes and expiries faint" if marks else ""
+        price = sheet.chart(MARGIN_MM, sheet.top, half, middle, f"Price of path {story.path:,}{faint}", pad=(19, 3))
         outcomes.story_price(price, story, marks, names, currency=facts.currency)
         gap = float(np.abs(story.hedge - story.target).sum(axis=0).max())
         hedge = sheet.chart(

@@ -121,7 +121,8 @@ def share_with_error(value: float, error: float) -> str:
     """A fraction in per cent with its standard error."""
     if not (math.isfinite(value) and math.isfinite(error)):
         return percent(value)
-    return f"{100 * value:.1f} % (\u00b1{100 * error:.1f} %)"
+    decimals = 2 if 0.0 < error < 5e-4 else 1
+    return f"{100 * value:.{decimals}f} % (\u00b1{100 * error:.{decimals}f} %)"
 
 
 def unit_of(values: Floats) -> tuple[float, str]:
@@ -165,9 +166,9 @@ def log_axis(axis: Axis, low: float, high: float, *, most: int = 7, name: str = 
     axis.set_major_formatter(FuncFormatter(label))
 
 
-def plain_axis(axis: Axis, scale: float) -> None:
+def plain_axis(axis: Axis, scale: float, *, ticks: int = 6) -> None:
     """Tick labels of the values divided by `scale`, with thousands separators."""
-    axis.set_major_locator(MaxNLocator(6, steps=[1, 2, 2.5, 5, 10]))
+    axis.set_major_locator(MaxNLocator(ticks, steps=[1, 2, 2.5, 5, 10]))
     axis.set_major_formatter(FuncFormatter(lambda value, _=None: f"{value / scale:,.6g}"))
 
 

@@ -20,10 +20,10 @@ from hedgesim.study.money import money, money_with_error
 def objective_title(view: View) -> str:
     """The finding of the objective chart."""
     k = view.best
-    charge = view.cost_of_risk * view.risk[k]
+    risk = f"{view.risk[k]:.3g}" if view.risk_name == "variance" else money(view.risk[k])
     return (
-        f"{style.start(view.names[k])}: {view.cost_name} {money(view.cost[k])} plus {view.cost_of_risk:g} x "
-        f"{view.risk_name} = {money(charge)} makes {money(view.objective[k])}"
+        f"{style.start(view.names[k])}: {view.cost_name} {money(view.cost[k])} + {view.cost_of_risk:g} x "
+        f"{view.risk_name} {risk} = {money(view.objective[k])}"
     )
 
 
