@@ -29,7 +29,7 @@ def test_handbook_prices(name, s, k, t, r, b, vol, call, price, digits):
 
 def test_handbook_greeks():
     # Haug, 2nd ed. (from memory): futures option deltas, gamma. Hull ch. 19, 11th ed.: delta .522, gamma .066, vega 12.1.
-    future = dict(years=0.5, variance_years=0.5, vol=0.36, rate=0.10, growth=0.0)
+    future = {"years": 0.5, "variance_years": 0.5, "vol": 0.36, "rate": 0.10, "growth": 0.0}
     assert float(greeks(105, 100, is_call=True, **future).delta) == pytest.approx(0.5946, abs=5e-5)
     assert float(greeks(105, 100, is_call=False, **future).delta) == pytest.approx(-0.3566, abs=5e-5)
     gamma = greeks(55, 60, years=0.75, variance_years=0.75, vol=0.30, rate=0.10, growth=0.10, is_call=True).gamma
@@ -41,19 +41,23 @@ def test_handbook_greeks():
 
 
 def test_prices_match_mpmath_over_a_grid():
-    for s, k, t, vol, r, b in [(100, 80, 2.0, 0.5, 0.03, -0.02), (100, 130, 0.01, 0.1, 0.0, 0.0), (1e-3, 2e-3, 5, 1.2, 0.1, 0.1)]:
+    for s, k, t, vol, r, b in [
+        (100, 80, 2.0, 0.5, 0.03, -0.02),
+        (100, 130, 0.01, 0.1, 0.0, 0.0),
+        (1e-3, 2e-3, 5, 1.2, 0.1, 0.1),
+    ]:
         with mpmath.workdps(40):
             forward, root = mpmath.mpf(s) * mpmath.exp(mpmath.mpf(b) * t), mpmath.mpf(vol) * mpmath.sqrt(t)
             d1 = mpmath.log(forward / k) / root + root / 2
             call = mpmath.exp(-mpmath.mpf(r) * t) * (forward * mpmath.ncdf(d1) - k * mpmath.ncdf(d1 - root))
             put = call - mpmath.exp(-mpmath.mpf(r) * t) * (forward - k)
-        terms = dict(years=t, variance_years=t, vol=vol, rate=r, growth=b)
+        terms = {"years": t, "variance_years": t, "vol": vol, "rate": r, "growth": b}
         assert float(value(s, k, is_call=True, **terms)) == pytest.approx(float(call), rel=1e-12, abs=1e-15 * s)
         assert float(value(s, k, is_call=False, **terms)) == pytest.approx(float(put), rel=1e-12, abs=1e-15 * s)
 
 
 def test_greeks_are_the_derivatives_of_the_value():
-    terms = dict(years=0.7, variance_years=0.6, rate=0.04, growth=0.01, is_call=np.array([True, False]))
+    terms = {"years": 0.7, "variance_years": 0.6, "rate": 0.04, "growth": 0.01, "is_call": np.array([True, False])}
     step = 1e-4
     centre = greeks(100, 105, vol=0.25, **terms)
     up, down = (value(100 + e, 105, vol=0.25, **terms) for e in (step, -step))
@@ -65,7 +69,7 @@ def test_greeks_are_the_derivatives_of_the_value():
 
 
 def test_a_settled_option_is_its_payoff_with_one_sided_delta():
-    terms = dict(years=0.0, variance_years=0.0, vol=0.2, rate=0.05, growth=0.05)
+    terms = {"years": 0.0, "variance_years": 0.0, "vol": 0.2, "rate": 0.05, "growth": 0.05}
     g = greeks([90.0, 100.0, 110.0], 100.0, is_call=True, **terms)
     assert g.value == pytest.approx([0, 0, 10])
     assert g.delta == pytest.approx([0, 0.5, 1])
