@@ -68,6 +68,17 @@ def test_inceptions_by_looks_may_fall_within_a_day():
     assert [life.row for life in laid.inceptions] == list(range(0, 77, 7))
 
 
+@pytest.mark.parametrize("rows_per_day", [1, 3, 7])
+def test_expiries_are_met_in_spite_of_rounding_in_the_clock(rows_per_day):
+    # Thirds and sevenths of a day, and years that are no binary fractions.
+    expiries = [Expiry(days=15.0), Expiry(years=15 / 252), Expiry(days=21.0), Expiry(years=21 / 252)]
+    laid = lay(history(rows_per_day=rows_per_day, days=60), [call(e) for e in expiries], Inceptions("days", 1.0))
+    assert len(laid.inceptions) == 39
+    for life in laid.inceptions:
+        assert life.book.expiry_look.tolist() == [n * rows_per_day for n in (15, 15, 21, 21)]
+    assert laid.notes == ()
+
+
 def test_once_is_the_first_row():
     laid = lay(history(), [call(Expiry(days=10.0)), call(Expiry(years=15 / 252))], Inceptions("once"))
     assert [life.row for life in laid.inceptions] == [0]

@@ -257,7 +257,7 @@ def stationary_resamples(count: int, block: float, resamples: int, seed: int) ->
     random = np.random.default_rng([seed, _BOOTSTRAP_STREAM])
     fresh = random.integers(count, size=(resamples, count))
     restart = random.random((resamples, count)) < 1.0 / block
-    restart[:, 0] = True
     place = np.arange(count)
+    # The first place begins a block in any case: `began` is zero until the first restart.
     began = np.maximum.accumulate(np.where(restart, place, 0), axis=1)
     return (np.take_along_axis(fresh, began, axis=1) + place - began) % count
