@@ -13,6 +13,7 @@ F^(6) h^6 u^3 (1-u)^3 / 720; its derivative to leading order); with max|N^(6)| =
 tolerance, and the bound holds without sampling.
 """
 
+from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 
 import numpy as np
@@ -26,7 +27,7 @@ from hedgesim.paths.gbm import REACH_SD, Reach
 TOLERANCE = 1e-6
 _VALUE_BOUND = 2.307 / 46080
 _SLOPE_BOUND = 7.453e-5 * 2.307
-_PEAK_DENSITY = 0.3989
+_PEAK_PROBES = 24
 
 
 @dataclass(frozen=True)
@@ -65,6 +66,7 @@ def slope_table(
     looks: Ints,
     weight: Floats | None = None,
     tolerance: float = TOLERANCE,
+    threads: int = 1,
 ) -> Table:
     """Table of P(y) with its slope at `looks`, at the vols given, each position weighted by `weight` (default 1).
 
@@ -73,7 +75,7 @@ def slope_table(
     """
     t = terms(book, market)
     a = t.slope if weight is None else t.slope * weight
-    return _table(book, t, grid, reach, a, vol, looks, 0.5, tolerance)
+    return _table(book, t, grid, reach, a, vol, looks, 0.5, tolerance, threads)
 
 
 def strike_table(
@@ -85,10 +87,11 @@ def strike_table(
     vol: Floats,
     looks: Ints,
     tolerance: float = TOLERANCE,
+    threads: int = 1,
 ) -> Table:
     """Table of Q(y) at `looks`; errors as for `slope_table`, relative to sum|D_j|."""
     t = terms(book, market)
-    return _table(book, t, grid, reach, t.strike_leg, vol, looks, -0.5, tolerance)
+    return _table(book, t, grid, reach, t.strike_leg, vol, looks, -0.5, tolerance, threads)
 
 
 def _table(
@@ -101,15 +104,14 @@ def _table(
     looks: Ints,
     shift: float,
     tolerance: float,
+    threads: int,
 ) -> Table:
-    underlyings, count = reach.centre.shape
-    start = np.zeros((underlyings, count), dtype=np.int64)
-    cells = np.zeros((underlyings, count), dtype=np.int64)
-    low = np.zeros((underlyings, count))
-    per_cell = np.zeros((underlyings, count))
-    parts: list[Floats] = []
+    shape = reach.centre.shape
+    start, cells = np.zeros(shape, dtype=np.int64), np.zeros(shape, dtype=np.int64)
+    low, per_cell = np.zeros(shape), np.zeros(shape)
+    todo: list[tuple[int, int, Ints, Floats]] = []
     filled = 0
-    for u in range(underlyings):
+    for u in range(shape[0]):
         mine = np.flatnonzero(book.underlying == u)
         for look in looks:
             live = mine[book.expiry_look[mine] > look]
@@ -117,16 +119,29 @@ def _table(
                 continue
             root = vol[live] * np.sqrt(book.expiry_s[live] - grid.s[look])
             bottom, top = _span(reach, u, int(look), t.log_strike[live], root)
-            width = _cell_width(np.abs(amount[live]), root, tolerance)
+            width = _cell_width(np.abs(amount[live]), t.log_strike[live], root, tolerance)
             n = max(1, int(np.ceil((top - bottom) / width)))
-            width = (top - bottom) / n
-            out = np.empty((n, 6))
-            puts = -float(amount[live][~book.is_call[live]].sum())
-            fill_cells(bottom, width, amount[live], t.log_strike[live], root, shift, puts, out)
-            start[u, look], cells[u, look], low[u, look], per_cell[u, look] = filled, n, bottom, 1.0 / width
-            parts.append(out)
+            start[u, look], cells[u, look], low[u, look], per_cell[u, look] = filled, n, bottom, n / (top - bottom)
+            todo.append((u, int(look), live, root))
             filled += n
-    coefficients = np.concatenate(parts) if parts else np.zeros((0, 6))
+    coefficients = np.empty((filled, 6))
+
+    def fill(part: list[tuple[int, int, Ints, Floats]]) -> None:
+        for u, look, live, root in part:
+            first = start[u, look]
+            fill_cells(
+                low[u, look],
+                1.0 / per_cell[u, look],
+                amount[live],
+                t.log_strike[live],
+                root,
+                shift,
+                -float(amount[live][~book.is_call[live]].sum()),
+                coefficients[first : first + cells[u, look]],
+            )
+
+    with ThreadPoolExecutor(threads) as pool:
+        list(pool.map(fill, [todo[k::threads] for k in range(threads)]))
     return Table(start, cells, low, per_cell, coefficients)
 
 
@@ -142,16 +157,22 @@ def _span(reach: Reach, u: int, look: int, log_strike: Floats, root: Floats) -> 
     return bottom, top
 
 
-def _cell_width(size: Floats, root: Floats, tolerance: float) -> float:
+def _cell_width(size: Floats, log_strike: Floats, root: Floats, tolerance: float) -> float:
     """Largest width that keeps both error bounds; `size` are the absolute amounts."""
     total = float(size.sum())
     if total == 0.0:
         return float("inf")
     sixth = float((size / root**6).sum())
     value = (tolerance * total / (_VALUE_BOUND * sixth)) ** (1 / 6)
-    peak = float((size / root).max()) * _PEAK_DENSITY
-    slope = (tolerance * peak / (_SLOPE_BOUND * sixth)) ** (1 / 5)
+    slope = (tolerance * _peak_slope(size, log_strike, root) / (_SLOPE_BOUND * sixth)) ** (1 / 5)
     return float(min(value, slope))
+
+
+def _peak_slope(size: Floats, log_strike: Floats, root: Floats) -> float:
+    """Peak of the gross slope sum_j size_j phi((y - k_j) / w_j) / w_j, looked for at some of the strikes."""
+    some = log_strike[np.linspace(0, len(log_strike) - 1, min(len(log_strike), _PEAK_PROBES)).astype(np.int64)]
+    density = np.exp(-0.5 * np.square((some[:, None] - log_strike) / root)) / np.sqrt(2 * np.pi)
+    return float((density @ (size / root)).max())
 
 
 def payoff_knots(book: Book, market: Market, looks: int) -> Payoff:

@@ -78,7 +78,16 @@ class _Chunk:
     detail: tuple[Floats, Floats, Floats] | None
 
 
-def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, source: Gbm, costs: CostTerms) -> Setup:
+def prepare(
+    *,
+    market: Market,
+    book: Book,
+    grid: LookGrid,
+    compiled: Compiled,
+    source: Gbm,
+    costs: CostTerms,
+    threads: int = 1,
+) -> Setup:
     """Tables and constants of an experiment for the kernel."""
     looks, names = grid.looks, market.names
     underlyings = len(names)
@@ -91,12 +100,12 @@ def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, s
     valued_looks = np.flatnonzero(valued | (all_looks == 0))
     last = np.array([looks])
 
-    slope = slope_table(book, market, grid, reach, vol=book.hedge_vol, looks=all_looks)
+    slope = slope_table(book, market, grid, reach, vol=book.hedge_vol, looks=all_looks, threads=threads)
     same_vols = bool(np.array_equal(book.hedge_vol, book.mark_vol))
     if same_vols:
         mark_slope = slope
     else:
-        mark_slope = slope_table(book, market, grid, reach, vol=book.mark_vol, looks=valued_looks)
+        mark_slope = slope_table(book, market, grid, reach, vol=book.mark_vol, looks=valued_looks, threads=threads)
     hedge_vol_squared = book.hedge_vol**2
     variance_slope = slope_table(
         book,
@@ -106,6 +115,7 @@ def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, s
         vol=book.hedge_vol,
         looks=all_looks[:0] if one_vol else all_looks,
         weight=hedge_vol_squared,
+        threads=threads,
     )
     at_hedge = exposure(book, market, vol=book.hedge_vol).value
     at_mark = exposure(book, market).value
@@ -114,7 +124,7 @@ def prepare(*, market: Market, book: Book, grid: LookGrid, compiled: Compiled, s
         slope=slope,
         variance_slope=variance_slope,
         mark_slope=mark_slope,
-        mark_strike=strike_table(book, market, grid, reach, vol=book.mark_vol, looks=valued_looks),
+        mark_strike=strike_table(book, market, grid, reach, vol=book.mark_vol, looks=valued_looks, threads=threads),
         hedge_strike=strike_table(book, market, grid, reach, vol=book.hedge_vol, looks=last),
         payoff=payoff_knots(book, market, looks),
         start_hedge=np.array([at_hedge[j].sum() for j in of]),
@@ -198,12 +208,13 @@ def simulate(
     -------
     Ledger with every standard error by jackknife over groups of paths
     """
-    setup = prepare(market=market, book=book, grid=grid, compiled=compiled, source=source, costs=costs)
+    threads = threads or os.cpu_count() or 1
+    setup = prepare(market=market, book=book, grid=grid, compiled=compiled, source=source, costs=costs, threads=threads)
     bounds = _chunk_bounds(count)
     groups = min(len(bounds), _LARGEST_GROUPS)
     merger = _Merger(setup, count, groups, len(bounds))
     done = 0
-    for chunk in _in_order(setup, source.seed, bounds, threads or os.cpu_count() or 1, detail, chunks_per_block):
+    for chunk in _in_order(setup, source.seed, bounds, threads, detail, chunks_per_block):
         merger.add(chunk)
         done += chunk.paths
         if progress is not None:
