@@ -96,8 +96,8 @@ def ledger(every, *, paths=4000, looks=126, underlyings=("CORVANE",), replayed=F
     resamples = None
     if replayed:
         kind, count = "bootstrap", 99 if paths > 1 else 0
-        resamples = rng.integers(0, paths, (count, paths)) if count else None
-        made = [moments(p) for p in resamples] if count else []
+        resamples = rng.integers(0, paths, (count, paths))
+        made = [moments(p) for p in resamples]
         factor = 1 / (count - 1) if count else 1.0
     else:
         kind, count = "jackknife", 32

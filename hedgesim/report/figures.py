@@ -256,9 +256,10 @@ def frequency_law(axes: Axes, view: View, *, currency: str) -> None:
                 label="asymptotic 1/N (quadratic variation)",
             )
         )
-    handles.append(
-        Line2D([], [], color=style.QUIET, marker="o", ls="none", mfc=style.QUIET, label="in the fit (\u00b1 1 se)")
-    )
+    if any(view.fitted):
+        handles.append(
+            Line2D([], [], color=style.QUIET, marker="o", ls="none", mfc=style.QUIET, label="in the fit (\u00b1 1 se)")
+        )
     if not all(view.fitted[k] for k in np.flatnonzero(usable)):
         handles.append(
             Line2D([], [], color=style.QUIET, marker="o", ls="none", mfc=style.PAPER, mew=1.6, label="beside the fit")

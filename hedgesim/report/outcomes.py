@@ -271,11 +271,19 @@ def story_price(axes: Axes, story: Story, marks: Sequence[OptionMark], names: Se
 UNDERLYING = (style.ACCENT, "#B8860B", "#007A5A", "#7A3E6B")
 
 
+def hedge_title(story: Story) -> str:
+    """How far the hedge strays from the reference delta."""
+    gap = np.abs(story.hedge - story.target).max(axis=1)
+    if float(gap.max()) <= 1e-9 * float(np.abs(story.hedge).max()):
+        return "The hedge is the reference delta at every look"
+    return f"The hedge is at most {' and '.join(f'{g:,.0f}' for g in gap)} units from the reference delta"
+
+
 def story_hedge(axes: Axes, story: Story, names: Sequence[str]) -> None:
     """Units held against the reference delta, as steps."""
     for u in range(len(names)):
         colour = UNDERLYING[u % len(UNDERLYING)]
-        axes.plot(story.t, story.target[u], color=colour, lw=0.8, alpha=0.55, zorder=2)
+        axes.step(story.t, story.target[u], where="post", color=colour, lw=0.8, alpha=0.55, zorder=2)
         axes.step(story.t, story.hedge[u], where="post", color=colour, lw=1.4, zorder=3)
     axes.axhline(0, color=style.HAIR, lw=0.6)
     axes.set_xlim(story.t[0], story.t[-1])

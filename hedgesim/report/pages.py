@@ -13,6 +13,8 @@ from hedgesim.report.view import Share, View, mark_of
 from hedgesim.study.money import money, money_with_error, percent
 
 _FIRST_PAGE_ROWS = 12
+# Components are sums over looks: beside the largest, anything this small is rounding.
+_ROUNDING = 1e-9
 
 
 def finding(view: View, facts: RunFacts) -> list[Sheet]:
@@ -177,16 +179,17 @@ def shares(view: View, facts: RunFacts) -> list[Sheet]:
 
 
 def _worth_showing(view: View, underlying: str) -> list[Share]:
-    """Rows of the breakdown that are not zero; cost kinds only when there are several."""
+    """Rows of the breakdown that are more than rounding; cost kinds only when there are several."""
     best = view.best
     rows = [s for s in view.shares if s.underlying == underlying]
-    rows = [s for s in rows if s.component == "total" or s.mean[best] != 0.0 or s.std[best] > 0.0]
+    noise = _ROUNDING * max(float(np.nanmax([np.abs(s.mean[best]), s.std[best]])) for s in rows)
+    rows = [s for s in rows if s.component == "total" or not (abs(s.mean[best]) <= noise and not s.std[best] > noise)]
     kinds = sum("." in s.component for s in rows)
     return [s for s in rows if "." not in s.component or kinds > 1]
 
 
 def _share_columns(rows: Sequence[Share], best: int) -> list[Column]:
-    noise = 1e-9 * max((float(np.nan_to_num(s.std[best])) for s in rows), default=0.0)
+    noise = _ROUNDING * max((float(np.nan_to_num(s.std[best])) for s in rows), default=0.0)
     return [
         Column("component", [style.words(s.component) for s in rows], "left"),
         Column("mean \u00b1 1 se", [_beyond_rounding(s.mean[best], s.mean_se[best]) for s in rows]),
@@ -197,7 +200,7 @@ def _share_columns(rows: Sequence[Share], best: int) -> list[Column]:
 
 def _beyond_rounding(value: float, error: float) -> str:
     """A mean with its error; one that is the same on every path has an error of rounding only, which says nothing."""
-    return money(value) if error < 1e-9 * abs(value) else money_with_error(value, error)
+    return money(value) if error < _ROUNDING * abs(value) else money_with_error(value, error)
 
 
 def distribution(view: View, facts: RunFacts) -> list[Sheet]:
@@ -303,17 +306,12 @@ def stories(view: View, facts: RunFacts) -> list[Sheet]:
         sheet = new_sheet(view, facts, f"path_{k + 1}", outcomes.story_title(story, facts.currency))
         middle = sheet.top + (BOTTOM_MM - sheet.top) * 0.45
         faint = ", strikes and expiries faint" if marks else ""
-        price = sheet.chart(MARGIN_MM, sheet.top, half, middle, f"Price of path {story.path:,}{faint}", pad=(19, 3))
+        labelled = story.path < len(facts.inceptions)
+        start = f" from {facts.inceptions[story.path]}" if labelled else f" of path {story.path:,}"
+        price = sheet.chart(MARGIN_MM, sheet.top, half, middle, f"Price{start}{faint}", pad=(19, 3))
         outcomes.story_price(price, story, marks, names, currency=facts.currency)
-        gap = float(np.abs(story.hedge - story.target).sum(axis=0).max())
-        hedge = sheet.chart(
-            MARGIN_MM,
-            middle + 2,
-            half,
-            BOTTOM_MM,
-            f"The hedge is at most {money(gap)} units from the reference delta",
-            pad=(19, 30),
-        )
+        title = outcomes.hedge_title(story)
+        hedge = sheet.chart(MARGIN_MM, middle + 2, half, BOTTOM_MM, title, pad=(19, 30))
         outcomes.story_hedge(hedge, story, names)
         end = float(story.components["total"][-1]) if "total" in story.components else math.nan
         pnl = sheet.chart(

@@ -128,6 +128,7 @@ def distribution(ledger: Ledger, schedules: Ints) -> Distribution:
     resampled = None
     if ledger.resamples is not None:
         values = np.array([[_figures(ledger.totals[i][pick]) for i in schedules] for pick in ledger.resamples])
+        values = values.reshape(-1, len(schedules), 4)
         errors = list(ledger.replicates.spread(values))
         resampled = frozen(values[:, :, 3])
     shape = [_shape(ledger.totals[i]) for i in schedules]
