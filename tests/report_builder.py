@@ -204,5 +204,6 @@ def facts(book, **changes):
         stories=(story("an ordinary path", 3, underlyings=n), story("a bad path", 8, underlyings=n)),
         ledger=book,
         marks=(marks, marks),
+        inceptions=tuple(f"inception {k}" for k in range(book.count)) if book.engine == "replay" else (),
     )
     return replace(made, **changes)

@@ -300,12 +300,17 @@ def shares_title(view: View) -> str:
     return f"{style.start(style.words(top.component))} carries {part} of the variance of P&L under {view.names[best]}"
 
 
+def most_rows(axes: Axes) -> int:
+    """How many named rows these axes have room for."""
+    return max(int(axes.get_position().height * HEIGHT_MM / 4.2), 4)
+
+
 def covariance_shares(axes: Axes, view: View, *, currency: str) -> None:
     """A diverging bar by schedule: Cov(component, total) / Var(total); bars to the left are negative.
 
     Where there is one outcome only, the amounts of the components instead.
     """
-    rows = view.pick(max(int(axes.get_position().height * HEIGHT_MM / 4.2), 4))
+    rows = view.pick(most_rows(axes))
     parts = [(s.component, np.nan_to_num((s.share if view.varied else s.mean)[rows])) for s in view.book_shares]
     largest = max((float(np.abs(values).max()) for _, values in parts), default=0.0)
     parts = [(name, values) for name, values in parts if np.abs(values).max() > 5e-4 * largest]

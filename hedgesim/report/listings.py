@@ -10,6 +10,7 @@ from hedgesim.study.money import money, money_with_error
 
 GUTTER_MM = 12.0
 _ROW_MM = 5.4
+_MOST_POSITIONS = 300
 
 
 def new_sheet(view: View, facts: RunFacts, name: str, title: str) -> Sheet:
@@ -20,6 +21,13 @@ def new_sheet(view: View, facts: RunFacts, name: str, title: str) -> Sheet:
 def all_cautions(view: View, facts: RunFacts) -> tuple[str, ...]:
     """The standing caution, the caller's and the study's, each once."""
     return tuple(dict.fromkeys((CAUTION, *facts.cautions, *view.warnings)))
+
+
+def drawn_of(view: View, *most: int) -> str:
+    """For the footer of charts that have room for `most` schedules each: how many of all they draw."""
+    n = len(view.names)
+    drawn = [str(min(m, n)) for m in most]
+    return f"; drawn: {' and '.join(drawn)} of {n}" if n > min(most) else ""
 
 
 def root(variance: float) -> float:
@@ -71,12 +79,19 @@ def schedule_tables(view: View, facts: RunFacts) -> list[Sheet]:
     return sheets
 
 
+def _first(lines: tuple[str, ...]) -> tuple[str, ...]:
+    if len(lines) <= _MOST_POSITIONS:
+        return lines
+    more = len(lines) - _MOST_POSITIONS
+    return (*lines[:_MOST_POSITIONS], f"and {more:,} more positions, all of them in the experiment's book")
+
+
 def inputs(view: View, facts: RunFacts) -> list[Sheet]:
     """Market, book, method, versions, seed and hashes in two columns, as many pages as it takes."""
     seed = "none drawn" if facts.seed is None else str(facts.seed)
     blocks = [
         ("Market", facts.market_lines),
-        ("Book", facts.book_lines),
+        ("Book", _first(facts.book_lines)),
         ("Method", facts.method_lines),
         ("Sample", (source_line(view, facts), f"seed: {seed}")),
         ("Cautions", all_cautions(view, facts)),

@@ -17,7 +17,7 @@ from hedgesim.report.view import View
 from hedgesim.study.money import money, money_with_error
 
 MOST_RIDGES = 12
-_MOST_LINES = 8
+MOST_LINES = 8
 _FEW = 40
 
 
@@ -132,7 +132,7 @@ def exceedance(axes: Axes, view: View, totals: Floats, *, currency: str) -> None
         axes.set_xticks([])
         axes.set_yticks([])
         return
-    rows = view.pick(_MOST_LINES)
+    rows = view.pick(MOST_LINES)
     floor = max(1.0 / n, 1e-5)
     left, right = math.inf, -math.inf
     for r in rows:

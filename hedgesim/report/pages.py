@@ -7,12 +7,12 @@ import numpy as np
 
 from hedgesim.report import figures, outcomes, style, tradeoff
 from hedgesim.report.facts import RunFacts
-from hedgesim.report.listings import GUTTER_MM, all_cautions, count, inputs, new_sheet, root, schedule_tables
+from hedgesim.report.listings import GUTTER_MM, all_cautions, count, drawn_of, inputs, new_sheet, root, schedule_tables
 from hedgesim.report.sheet import BOTTOM_MM, MARGIN_MM, TEXT_WIDTH_MM, Column, Sheet, line_height, wrap
 from hedgesim.report.view import Share, View, mark_of
 from hedgesim.study.money import money, money_with_error, percent
 
-_FIRST_PAGE_ROWS = 12
+_FIRST_PAGE_ROWS, _PRICE_ROWS = 12, 20
 # Components are sums over looks: beside the largest, anything this small is rounding.
 _ROUNDING = 1e-9
 
@@ -39,9 +39,10 @@ def finding(view: View, facts: RunFacts) -> list[Sheet]:
         key_columns(view, rows),
         strong=[k for k, r in enumerate(rows) if r == view.best],
     )
+    note = f"Amounts per life in {facts.currency}, discounted to the start."
     if len(rows) < len(view.names):
-        note = f"{len(rows)} of {len(view.names)} schedules, those nearest the best; all of them on the table pages."
-        sheet.text(MARGIN_MM, below + 1.5, note, size=9.0, colour=style.QUIET, width=table_width)
+        note += f" {len(rows)} of {len(view.names)} schedules, those nearest the best; all of them on the table pages."
+    below = sheet.text(MARGIN_MM, below + 1.5, note, size=9.0, colour=style.QUIET, width=table_width)
     left = MARGIN_MM + table_width + GUTTER_MM
     width = TEXT_WIDTH_MM - table_width - GUTTER_MM
     y = sheet.top
@@ -50,9 +51,9 @@ def finding(view: View, facts: RunFacts) -> list[Sheet]:
         y = sheet.text(left, y, body, size=9.0, width=width) + 2.5
     width_mm = table_width - 17.0
     under = figures.ticks_depth(view, rows, width_mm) + 8.5
-    if np.isfinite(view.objective[rows]).all() and top_of_cautions - below - under > 40.0:
+    if np.isfinite(view.objective[rows]).all() and top_of_cautions - below - under > 36.0:
         title = tradeoff.objective_title(view)
-        axes = sheet.chart(MARGIN_MM, below + 8, table_width, top_of_cautions - 3, title, pad=(17, under))
+        axes = sheet.chart(MARGIN_MM, below + 3, table_width, top_of_cautions - 3, title, pad=(17, under))
         tradeoff.objective_bars(axes, view, rows, currency=facts.currency, width_mm=width_mm)
     y = max(top_of_cautions, below + 6)
     sheet.rule(MARGIN_MM, y - 1.5, TEXT_WIDTH_MM, colour=style.ACCENT)
@@ -150,6 +151,7 @@ def shares(view: View, facts: RunFacts) -> list[Sheet]:
     width = TEXT_WIDTH_MM - table_width - GUTTER_MM
     axes = sheet.chart(MARGIN_MM, sheet.top, width, BOTTOM_MM, figures.shares_title(view), pad=(30, 26))
     figures.covariance_shares(axes, view, currency=facts.currency)
+    sheet.source += drawn_of(view, figures.most_rows(axes))
     left = MARGIN_MM + width + GUTTER_MM
     heading = f"{view.names[view.best]}: mean, spread and share of each component"
     y = sheet.text(left, sheet.top, heading, size=style.CHART_TITLE, bold=True, width=table_width) + 1.5
@@ -218,6 +220,7 @@ def distribution(view: View, facts: RunFacts) -> list[Sheet]:
         outcomes.exceedance_title(view, currency),
         pad=(19, 30),
     )
+    sheet.source += drawn_of(view, outcomes.MOST_RIDGES, outcomes.MOST_LINES)
     outcomes.exceedance(axes, view, totals, currency=currency)
     return [sheet]
 
@@ -245,7 +248,9 @@ def price_of_risk(view: View, facts: RunFacts) -> list[Sheet]:
         )
         + 1.5
     )
-    steps = view.steps[:20]
+    place = next((k for k, s in enumerate(view.steps) if s.schedule == view.names[view.best]), 0)
+    first = max(0, min(place - _PRICE_ROWS // 2, len(view.steps) - _PRICE_ROWS))
+    steps = view.steps[first : first + _PRICE_ROWS]
     columns = [
         Column("schedule", [s.schedule for s in steps], "left"),
         Column("extra cost per unit of risk\nremoved by the next row", [_price(s.price, s.price_se) for s in steps]),
@@ -262,7 +267,11 @@ def price_of_risk(view: View, facts: RunFacts) -> list[Sheet]:
     )
     if len(view.steps) > len(steps):
         y = sheet.text(
-            left, y + 1, f"{len(steps)} of {len(view.steps)} efficient schedules", size=9.0, colour=style.QUIET
+            left,
+            y + 1,
+            f"{len(steps)} of {len(view.steps)} efficient schedules, around the chosen one",
+            size=9.0,
+            colour=style.QUIET,
         )
     sheet.text(left, y + 3, view.cost_of_risk_words, size=9.0, width=table_width)
     return [sheet]
@@ -301,7 +310,8 @@ def stories(view: View, facts: RunFacts) -> list[Sheet]:
     sheets = []
     half = (TEXT_WIDTH_MM - GUTTER_MM) / 2
     names = facts.ledger.underlyings
-    for k, story in enumerate(facts.stories):
+    told = facts.stories[:1] if len(facts.inceptions) == 1 else facts.stories
+    for k, story in enumerate(told):
         marks = facts.marks[k] if k < len(facts.marks) else ()
         sheet = new_sheet(view, facts, f"path_{k + 1}", outcomes.story_title(story, facts.currency))
         middle = sheet.top + (BOTTOM_MM - sheet.top) * 0.45
