@@ -134,10 +134,12 @@ def prepare(
     weight = market.hedge_weights(grid.t)
     inverse = np.concatenate([1.0 / weight, np.zeros((underlyings, 1))], axis=1)
     discount = np.exp(-market.rate * grid.t)
-    first = np.concatenate([[0], np.cumsum(compiled.trades_at.sum(axis=0))])
+    first, who, slot, from_slot = _trade_list(compiled)
     hedging = Hedging(
-        first=first.astype(np.int64),
-        who=np.concatenate([np.flatnonzero(column) for column in compiled.trades_at.T]).astype(np.int64),
+        first=first,
+        who=who,
+        slot=slot,
+        from_slot=from_slot,
         inverse_weight=inverse,
         weight=weight,
         price_factor=np.exp(np.outer(market.growth - market.rate, grid.t)),
@@ -173,6 +175,26 @@ def prepare(
         day_costs=DayCosts(accounts.half_spread, accounts.per_unit, accounts.per_trade, tickets),
         accounts=accounts,
     )
+
+
+def _trade_list(compiled: Compiled) -> tuple[Ints, Ints, Ints, Ints]:
+    """Trades look by look, and the slots in which the targets they leave behind are kept; see `Hedging`."""
+    schedules, count = compiled.trades_at.shape
+    holds = [0] * schedules
+    first, who, slot, from_slot = [0], [], [], []
+    for look in range(count):
+        trading = np.flatnonzero(compiled.trades_at[:, look])
+        who += list(trading)
+        from_slot += [holds[s] for s in trading]
+        resting = set(range(schedules)) - set(trading)
+        # What is held before the trade is read at this look, so only slots that nobody holds even then are free.
+        free = min(set(range(schedules + 2)) - {holds[s] for s in resting} - {holds[s] for s in trading})
+        for s in trading:
+            holds[s] = free
+        slot.append(free if len(trading) else -1)
+        first.append(len(who))
+    arrays = (np.array(x, dtype=np.int64) for x in (first, who, slot, from_slot))
+    return tuple(arrays)  # type: ignore[return-value]
 
 
 def _cost_arrays(costs: CostTerms) -> tuple[Floats, Floats, Floats]:

@@ -142,8 +142,8 @@ def draw_normals(
 ) -> None:
     """One normal for each path of the tile.
 
-    The passes over the tile have no branch; the 1 % of draws that leave the sure part of their strip are finished one
-    by one, each on its own path's stream. `raw`, `width`, `spare` (as long as the tile) and `late` (one longer) are
+    The passes over the tile have no branch; the 1 % of draws that leave the sure part of their strip are finished
+    apart, each on its own path's stream. `raw`, `width`, `spare` (as long as the tile) and `late` (one longer) are
     scratch.
     """
     n = out.shape[0]
@@ -170,9 +170,22 @@ def draw_normals(
     for p in range(n):
         late[found] = p
         found += spare[p] <= 0.0
+    # The draw that decides in the wedge of a strip: all at once, since exp vectorises. A height of 2 leaves the tail.
     for k in range(found):
         p = late[k]
-        out[p] = _finish(state, p, raw[p])
+        level = raw[p] & _U255
+        spare[k] = 2.0
+        if level != np.uint64(0):
+            u = np.float64(_next(state, p) >> _U11) * _TO_UNIT
+            spare[k] = (_HEIGHT[level - _U1] - _HEIGHT[level]) * u + _HEIGHT[level]
+        width[k] = -0.5 * out[p] * out[p]
+    for k in range(found):
+        width[k] = exp(width[k])
+    for k in range(found):
+        if spare[k] >= width[k]:
+            p = late[k]
+            again = raw[p] if raw[p] & _U255 == np.uint64(0) else _next(state, p)
+            out[p] = _finish(state, p, again)
 
 
 @kernel

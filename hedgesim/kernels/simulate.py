@@ -53,6 +53,10 @@ class Hedging(NamedTuple):
     Attributes
     ----------
     first, who : schedules that trade at look i are who[first[i]:first[i + 1]]
+    slot : (look,) where the target of the look is kept while a schedule holds it, -1 when none trades; what is held
+        is the target of the last trade, so that schedules which traded at the same look share it. Slot 0 has the
+        initial units
+    from_slot : like `who`: what the schedule held before
     inverse_weight : (underlying, look) hedge units per unit of dU/dX, see Market.hedge_weights; 0 at the last look
     weight : (underlying, look) its inverse
     price_factor : (underlying, look) exp((b - r) t): X times it is the price discounted at r
@@ -65,6 +69,8 @@ class Hedging(NamedTuple):
 
     first: Ints
     who: Ints
+    slot: Ints
+    from_slot: Ints
     inverse_weight: Floats
     weight: Floats
     price_factor: Floats
@@ -140,30 +146,59 @@ def _settle(payoff: Payoff, u: int, look: int, x: Floats, paid: Floats, delivere
 
 @device
 def _trade(
+    target: Floats, held: Floats, y: Floats, price: Floats, smallest: float, gain: Floats, turnover: Floats
+) -> int:
+    """Book the trade from `held` to `target` units; returns how many paths had no more than `smallest` to trade."""
+    idle = 0
+    for p in range(len(target)):
+        bought = target[p] - held[p]
+        gain[p] = fma(-bought, y[p], gain[p])
+        size = abs(bought)
+        turnover[p] = fma(size, price[p], turnover[p])
+        idle += size <= smallest
+    return idle
+
+
+@device
+def _trade_after_delivery(
     target: Floats,
+    held: Floats,
     delivered: Floats,
     y: Floats,
     price: Floats,
     smallest: float,
-    hedge: Floats,
     gain: Floats,
     turnover: Floats,
-    traded: Floats,
 ) -> int:
-    """Set the hedge to `target`; units handed over by settling options count as bought, but cost nothing.
-
-    Returns how many paths had no more than `smallest` to trade; `traded` is set to the absolute units.
-    """
+    """As `_trade`; units handed over by settling options count as bought, but cost nothing."""
     idle = 0
     for p in range(len(target)):
-        bought = target[p] - hedge[p]
-        hedge[p] = target[p]
+        bought = target[p] - held[p]
         gain[p] = fma(-bought, y[p], gain[p])
         size = abs(bought - delivered[p])
         turnover[p] = fma(size, price[p], turnover[p])
-        traded[p] = size
         idle += size <= smallest
     return idle
+
+
+@device
+def _count_trade(
+    target: Floats,
+    held: Floats,
+    delivered: Floats,
+    smallest: float,
+    discount: float,
+    units: Floats,
+    idle: Floats,
+    idle_discount: Floats,
+) -> None:
+    """Book units and idle looks, where they are needed."""
+    for p in range(len(target)):
+        size = abs(target[p] - held[p] - delivered[p])
+        units[p] = fma(size, discount, units[p])
+        if size <= smallest:
+            idle[p] += 1.0
+            idle_discount[p] += discount
 
 
 @device
@@ -260,7 +295,8 @@ def run_chunk(
     cell, part = np.empty(lanes, dtype=np.int32), np.empty(lanes)
     one, two, three = np.empty(lanes), np.empty(lanes), np.empty(lanes)
     rows = np.empty((underlyings, len(PATH_ROWS), lanes))
-    hedge = np.empty((schedules, underlyings, lanes))
+    targets = np.empty((schedules + 2, underlyings, lanes))
+    holds = np.empty(schedules, dtype=np.int64)
     trades = np.empty((schedules, underlyings, len(TRADE_ROWS), lanes))
     before = np.empty((schedules, lanes))
     days = np.empty((schedules, len(DAY_ROWS), lanes))
@@ -271,8 +307,8 @@ def run_chunk(
             seed_streams(np.uint64(seed), np.uint64(u), first_path + begin, state[u])
             log_x[u] = diffusion.log_start[u]
             x[u] = diffusion.start[u]
-            for s in range(schedules):
-                hedge[s, u] = hedging.initial[u]
+            targets[0, u] = hedging.initial[u]
+        holds[:] = 0
         y[:] = 0.0
         paid[:] = 0.0
         rows[:] = 0.0
@@ -293,27 +329,33 @@ def run_chunk(
                     gamma[u, p] *= x[u, p]
                     target[u, p] = unwind * slope[u, p]
                     price[u, p] = factor * x[u, p]
+                asked = hedging.slot[i]
+                if asked >= 0:
+                    targets[asked, u] = target[u]
                 for k in range(hedging.first[i], hedging.first[i + 1]):
                     s = hedging.who[k]
-                    mine = trades[s, u]
-                    idle = _trade(target[u], delivered[u], y[u], price[u], smallest, hedge[s, u], mine[0], mine[1], one)
-                    if hedging.count_units:
-                        for p in range(lanes):
-                            mine[2, p] = fma(one[p], hedging.discount[i], mine[2, p])
-                    if idle > 0:
-                        for p in range(lanes):
-                            if one[p] <= smallest:
-                                mine[3, p] += 1.0
-                                mine[4, p] += hedging.discount[i]
+                    held, mine = targets[hedging.from_slot[k], u], trades[s, u]
+                    if settles:
+                        idle = _trade_after_delivery(
+                            target[u], held, delivered[u], y[u], price[u], smallest, mine[0], mine[1]
+                        )
+                    else:
+                        idle = _trade(target[u], held, y[u], price[u], smallest, mine[0], mine[1])
+                    if hedging.count_units or idle > 0:
+                        _count_trade(
+                            target[u], held, delivered[u], smallest, hedging.discount[i], mine[2], mine[3], mine[4]
+                        )
                 if settles:
                     delivered[u] = 0.0
+            for k in range(hedging.first[i], hedging.first[i + 1]):
+                holds[hedging.who[k]] = hedging.slot[i]
 
             if watch and i < looks:
                 for s in range(schedules):
                     one[:] = 0.0
                     for u in range(underlyings):
                         for p in range(lanes):
-                            one[p] += abs(hedge[s, u, p] - target[u, p]) * price[u, p] / hedging.discount[i]
+                            one[p] += abs(targets[holds[s], u, p] - target[u, p]) * price[u, p] / hedging.discount[i]
                     residual_sum[s] += _count_residuals(one, n, residual_bins[s])
             if watch and (i == 0 or book.valued[i]):
                 z[:] = 0.0
@@ -328,7 +370,7 @@ def run_chunk(
                         for u in range(underlyings):
                             mine = trades[s, u]
                             for p in range(lanes):
-                                one[p] += mine[0, p] + hedge[s, u, p] * y[u, p]
+                                one[p] += mine[0, p] + targets[holds[s], u, p] * y[u, p]
                                 one[p] -= day_costs.half_spread[u] * mine[1, p] + day_costs.per_unit[u] * mine[2, p]
                                 one[p] -= day_costs.per_trade[u] * (day_costs.tickets[s, i] - mine[4, p])
                         for p in range(lanes):
@@ -342,13 +384,16 @@ def run_chunk(
                 for u in range(underlyings):
                     draw_normals(state[u], raw, one, two, late, fresh[u])
                 for u in range(underlyings):
-                    share = diffusion.mixing[u, u]
-                    for p in range(lanes):
-                        z[p] = share * fresh[u, p]
-                    for v in range(u):
-                        share = diffusion.mixing[u, v]
+                    # The first underlying's normals are its own: the factor's corner is one.
+                    normals = fresh[0] if u == 0 else z
+                    if u > 0:
+                        share = diffusion.mixing[u, u]
                         for p in range(lanes):
-                            z[p] = fma(share, fresh[v, p], z[p])
+                            z[p] = share * fresh[u, p]
+                        for v in range(u):
+                            share = diffusion.mixing[u, v]
+                            for p in range(lanes):
+                                z[p] = fma(share, fresh[v, p], z[p])
                     gap = rows[u, 1]
                     variance = diffusion.variance[u, i]
                     if diffusion.one_vol:
@@ -359,7 +404,7 @@ def run_chunk(
                         lookup(book.variance_slope, u, i, log_x[u], cell, part, one, two)
                         for p in range(lanes):
                             gap[p] += 0.5 * (variance * gamma[u, p] - diffusion.step_s[i] * x[u, p] * two[p])
-                    _grow(diffusion.mean[u, i], diffusion.sd[u, i], z, log_x[u], x[u], gain, dx)
+                    _grow(diffusion.mean[u, i], diffusion.sd[u, i], normals, log_x[u], x[u], gain, dx)
                     _book_look(variance, hedging.weight[u, i], slope[u], gamma[u], gain, dx, y[u], rows[u])
 
         for u in range(underlyings):
