@@ -73,8 +73,9 @@ def stack_title(view: View) -> str:
     best = view.best
     name = view.names[best]
     if math.isfinite(view.reference_gross):
-        ratio = view.gross[best] / view.reference_gross if view.reference_gross > 0 else math.nan
-        return f"Variance before costs under {name} is {ratio:.2f} times that of trading at every look"
+        shown = best if view.gross[best] > 1.005 * view.reference_gross else 0
+        ratio = view.gross[shown] / view.reference_gross if view.reference_gross > 0 else math.nan
+        return f"Variance before costs under {view.names[shown]} is {ratio:.2f} times that of trading at every look"
     part = style.share_with_error(view.share[best], view.share_se[best])
     if len(view.names) == 1 or best == 0:
         return f"Under {name} trading more would remove {part} of the variance before costs"
@@ -262,7 +263,7 @@ def frequency_law(axes: Axes, view: View, *, currency: str) -> None:
         )
     if not all(view.fitted[k] for k in np.flatnonzero(usable)):
         handles.append(
-            Line2D([], [], color=style.QUIET, marker="o", ls="none", mfc=style.PAPER, mew=1.6, label="beside the fit")
+            Line2D([], [], color=style.QUIET, marker="o", ls="none", mfc=style.PAPER, mew=1.6, label="not in the fit")
         )
     handles.append(
         Line2D([], [], color=style.PAPER, marker="o", ls="none", mec=style.CHOSEN, mew=1.6, ms=8, label="chosen")

@@ -185,6 +185,10 @@ class Sheet:
             for c in columns
         ]
         over = sum(widths) + gap * len(columns) - width
+        if over > 0:  # close up before names are cut
+            closed = min(over / len(columns), gap - 2.0)
+            gap -= closed
+            over -= closed * len(columns)
         loose = [k for k, c in enumerate(columns) if c.align == "left"]
         for k in sorted(loose, key=lambda k: -widths[k]):
             give = min(max(over, 0.0), max(widths[k] - 18.0, 0.0))
@@ -192,8 +196,7 @@ class Sheet:
             over -= give
         if over > 0:
             gap = max(gap - over / len(columns), 1.2)
-        spare = max(-over, 0.0) / max(len(columns), 1)
-        spare = min(spare, 9.0)
+        spare = min(max(-over, 0.0) / len(columns), 9.0)
         edges = [left]
         for w in widths:
             edges.append(edges[-1] + w + gap + spare)

@@ -40,7 +40,7 @@ COMPONENT = {
 WORDS = {
     "premium_edge": "premium edge",
     "vol_gap": "vol gap",
-    "vol_gap_seen": "vol gap as seen at the looks",
+    "vol_gap_seen": "vol gap as seen",
     "vol_mark": "vol re-mark",
 }
 

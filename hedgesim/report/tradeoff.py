@@ -59,9 +59,9 @@ def cost_risk_title(view: View, currency: str) -> str:
     more = f"; {ties} tied with it" if ties else ""
     cost = money_with_error(view.cost[k], view.cost_se[k], currency=currency)
     if view.risk_name == "variance":
-        return f"{style.start(view.names[k])}: {view.cost_name} {cost} at a variance of {view.risk[k]:.3g}{more}"
+        return f"{style.start(view.names[k])}: {view.cost_name} {cost}, variance {view.risk[k]:.3g}{more}"
     risk = money_with_error(view.risk[k], view.risk_se[k], currency=currency)
-    return f"{style.start(view.names[k])}: {view.cost_name} {cost} at a {view.risk_name} of {risk}{more}"
+    return f"{style.start(view.names[k])}: {view.cost_name} {cost}, {view.risk_name} {risk}{more}"
 
 
 def cost_risk(axes: Axes, view: View, *, currency: str) -> None:
