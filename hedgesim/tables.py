@@ -19,6 +19,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from hedgesim.book import Book
+from hedgesim.kernels.rows import LANES
 from hedgesim.kernels.simulate import Payoff
 from hedgesim.kernels.tables import Table, fill_cells
 from hedgesim.market import Floats, Ints, LookGrid, Market
@@ -124,7 +125,7 @@ def _table(
             start[u, look], cells[u, look], low[u, look], per_cell[u, look] = filled, n, bottom, n / (top - bottom)
             todo.append((u, int(look), live, root))
             filled += n
-    coefficients = np.empty((filled, 6))
+    coefficients = _line_aligned(filled)
 
     def fill(part: list[tuple[int, int, Ints, Floats]]) -> None:
         for u, look, live, root in part:
@@ -143,6 +144,13 @@ def _table(
     with ThreadPoolExecutor(threads) as pool:
         list(pool.map(fill, [todo[k::threads] for k in range(threads)]))
     return Table(start, cells, low, per_cell, coefficients)
+
+
+def _line_aligned(rows: int) -> Floats:
+    """Room for `rows` rows of a table, each on one line of the cache."""
+    space = np.zeros((rows + 1) * LANES)
+    skip = -space.ctypes.data % (8 * LANES) // 8
+    return space[skip : skip + rows * LANES].reshape(rows, LANES)
 
 
 def _span(reach: Reach, u: int, look: int, log_strike: Floats, root: Floats) -> tuple[float, float]:

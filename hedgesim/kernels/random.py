@@ -11,6 +11,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hedgesim.kernels.jit import device, kernel
+from hedgesim.kernels.rows import LANES, strip_of_eight, whole_lanes
 from hedgesim.kernels.vector_math import exp, log
 
 Floats = NDArray[np.float64]
@@ -59,7 +60,7 @@ def _ziggurat() -> tuple[NDArray[np.uint64], NDArray[np.float64], NDArray[np.flo
 
 ZIGGURAT = _ziggurat()
 _BOUND, _WIDTH, _HEIGHT = ZIGGURAT
-_BOUND_AS_FLOAT = _BOUND.astype(np.float64)
+_STRIPS = np.stack([_WIDTH, _BOUND.astype(np.float64)], axis=1)
 _TAIL = float(_TAIL_START)
 _INV_TAIL = float(1 / Decimal(_TAIL_START))
 
@@ -143,8 +144,8 @@ def draw_normals(
     """One normal for each path of the tile.
 
     The passes over the tile have no branch; the 1 % of draws that leave the sure part of their strip are finished
-    apart, each on its own path's stream. `raw`, `width`, `spare` (as long as the tile) and `late` (one longer) are
-    scratch.
+    apart, each on its own path's stream. The tile is a multiple of `LANES` long; `raw`, `width`, `spare` (as long) and
+    `late` (one longer) are scratch.
     """
     n = out.shape[0]
     a_, b_, c_, w_ = state[0], state[1], state[2], state[3]
@@ -156,16 +157,8 @@ def draw_normals(
         c_[p] = ((c << _U24) | (c >> _U40)) + r
         w_[p] = w + _U1
         raw[p] = r
-    for p in range(n):
-        level = np.uint32(raw[p] & _U255)
-        width[p] = _WIDTH[level]
-        spare[p] = _BOUND_AS_FLOAT[level]
-    for p in range(n):
-        r = raw[p]
-        whole = np.float64(np.int64((r >> _U9) & _U52_MASK))
-        x = whole * width[p]
-        out[p] = -x if (r >> _U8) & _U1 else x
-        spare[p] -= whole
+    for p in range(0, n, LANES):
+        strip_of_eight(_STRIPS, raw, out, spare, p)
     found = 0
     for p in range(n):
         late[found] = p
@@ -192,19 +185,20 @@ def draw_normals(
 def continue_normals(state: NDArray[np.uint64], out: Floats) -> None:
     """Normals by (look, path) from a given SFC64 state (4, path), which is moved on."""
     n = out.shape[1]
-    raw, late = np.empty(n, dtype=np.uint64), np.empty(n + 1, dtype=np.int32)
-    width, spare = np.empty(n), np.empty(n)
+    lanes = whole_lanes(n)
+    raw, late = np.empty(lanes, dtype=np.uint64), np.empty(lanes + 1, dtype=np.int32)
+    width, spare, fresh = np.empty(lanes), np.empty(lanes), np.empty(lanes)
+    padded = np.zeros((4, lanes), dtype=np.uint64)
+    padded[:, :n] = state
     for look in range(out.shape[0]):
-        draw_normals(state, raw, width, spare, late, out[look])
+        draw_normals(padded, raw, width, spare, late, fresh)
+        out[look] = fresh[:n]
+    state[:] = padded[:, :n]
 
 
 @kernel
 def fill_normals(seed: int, stream: int, first_path: int, out: Floats) -> None:
     """Normals by (look, path) for the paths from `first_path` on, as every engine sees them."""
-    n = out.shape[1]
-    state = np.empty((4, n), dtype=np.uint64)
-    raw, late = np.empty(n, dtype=np.uint64), np.empty(n + 1, dtype=np.int32)
-    width, spare = np.empty(n), np.empty(n)
+    state = np.empty((4, out.shape[1]), dtype=np.uint64)
     seed_streams(np.uint64(seed), np.uint64(stream), first_path, state)
-    for look in range(out.shape[0]):
-        draw_normals(state, raw, width, spare, late, out[look])
+    continue_normals(state, out)

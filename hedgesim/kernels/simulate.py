@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from hedgesim.kernels.jit import device, kernel
 from hedgesim.kernels.random import draw_normals, seed_streams
+from hedgesim.kernels.rows import whole_lanes
 from hedgesim.kernels.tables import TILE, Table, lookup
 from hedgesim.kernels.vector_math import as_bits, exp, expm1_near_zero, expm1_tiny, fma
 
@@ -283,7 +284,7 @@ def run_chunk(
     count = path_out.shape[2]
     underlyings = path_out.shape[0]
     schedules = hedging.schedules
-    lanes = min(TILE, count)
+    lanes = whole_lanes(min(TILE, count))
     tile = (underlyings, lanes)
     log_x, x, y = np.empty(tile), np.empty(tile), np.empty(tile)
     slope, gamma = np.empty(tile), np.empty(tile)

@@ -11,7 +11,8 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hedgesim.kernels.jit import device, kernel
-from hedgesim.kernels.vector_math import fma, normal_cdf, normal_pdf
+from hedgesim.kernels.rows import LANES, quintic_of_eight
+from hedgesim.kernels.vector_math import normal_cdf, normal_pdf
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -29,7 +30,7 @@ class Table(NamedTuple):
     cells : (underlying, look) number of cells, 0 where the function is zero
     low : (underlying, look) log price of the first node
     per_cell : (underlying, look) cells per unit of log price
-    coefficients : (cell, 6)
+    coefficients : (cell, 8), of which six columns are used: a row is one line of the cache
     """
 
     start: Ints
@@ -52,7 +53,8 @@ def fill_cells(
 ) -> None:
     """Coefficients of F(y) = constant + sum_j amount_j N((y - log_strike_j) / root_j + shift root_j).
 
-    `out` is (cells, 6); the nodes are low + i width; `root` = vol sqrt(variance years to expiry), positive.
+    `out` is (cells, 8), of which six columns are filled; the nodes are low + i width; `root` = vol sqrt(variance years
+    to expiry), positive.
     """
     cells = out.shape[0]
     value = np.full(cells + 1, constant)
@@ -94,7 +96,7 @@ def lookup(
 ) -> None:
     """F and dF/dy at each log price; beyond the ends of the table the value at the end, with its slope there.
 
-    `cell` and `part` are scratch: finding the cells apart from reading them lets the first loop vectorise.
+    All arrays have the same length, a multiple of `LANES`; `cell` and `part` are scratch.
     """
     cells = table.cells[underlying, look]
     if cells == 0:
@@ -103,7 +105,6 @@ def lookup(
             slope[p] = 0.0
         return
     first = table.start[underlying, look]
-    rows = table.coefficients[first : first + cells]
     low, per_cell = table.low[underlying, look], table.per_cell[underlying, look]
     top = np.float64(cells) - 1e-9
     for p in range(len(log_price)):
@@ -111,16 +112,5 @@ def lookup(
         whole = np.int32(place)
         cell[p] = whole
         part[p] = place - whole
-    for p in range(len(log_price)):
-        u = part[p]
-        c = np.uint32(cell[p])
-        f = fma(rows[c, 5], u, rows[c, 4])
-        d = fma(rows[c, 5], u, f)
-        f = fma(f, u, rows[c, 3])
-        d = fma(d, u, f)
-        f = fma(f, u, rows[c, 2])
-        d = fma(d, u, f)
-        f = fma(f, u, rows[c, 1])
-        d = fma(d, u, f)
-        value[p] = fma(f, u, rows[c, 0])
-        slope[p] = d * per_cell
+    for p in range(0, len(log_price), LANES):
+        quintic_of_eight(table.coefficients, first, cell, part, per_cell, value, slope, p)
