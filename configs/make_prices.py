@@ -1,4 +1,4 @@
-"""Write the invented price history of the examples: daily closes of TESSARD and an implied vol, from a fixed seed.
+"""Write the invented price history of the examples: daily closes of TESSOVAR and an implied vol, from a fixed seed.
 
 The variance reverts to a mean that itself drifts between calm and stressed years, the implied vol stands a little above
 the vol that follows, and a few days jump. No market or company is meant.
@@ -13,7 +13,7 @@ import numpy as np
 SEED = 20200106
 FIRST = date(2020, 1, 6)
 SESSIONS = 1512
-OUT = Path(__file__).with_name("tessard_closes.csv")
+OUT = Path(__file__).with_name("tessovar_closes.csv")
 
 
 def weekdays(first: date, count: int) -> list[date]:
@@ -44,7 +44,7 @@ def closes(random: np.random.Generator, count: int) -> tuple[np.ndarray, np.ndar
 
 
 def main() -> None:
-    """Write `tessard_closes.csv` beside this file."""
+    """Write `tessovar_closes.csv` beside this file."""
     price, implied = closes(np.random.default_rng(SEED), SESSIONS)
     with OUT.open("w", newline="", encoding="utf-8") as stream:
         writer = csv.writer(stream, lineterminator="\n")

@@ -167,13 +167,13 @@ def test_example_prices_are_what_their_generator_writes(tmp_path):
     made = runpy.run_path(str(CONFIGS / "make_prices.py"))
     made["main"].__globals__["OUT"] = tmp_path / "again.csv"
     made["main"]()
-    committed = CONFIGS / "tessard_closes.csv"
+    committed = CONFIGS / "tessovar_closes.csv"
     assert (tmp_path / "again.csv").read_bytes() == committed.read_bytes()
     h = read_prices(
         committed,
         time="date",
         time_unit_years=None,
-        series={"TESSARD": SeriesColumns("close", "iv", 0.01)},
+        series={"TESSOVAR": SeriesColumns("close", "iv", 0.01)},
         day_count="business-252",
     )
     assert h.rows == 1512

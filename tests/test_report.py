@@ -30,7 +30,7 @@ KINDS = {
     "price history": {"every": [1, 2, 3, 5, 10, 21, 63], "replayed": True, "paths": 120},
     "price history, every look not asked for": {"every": [2, 6, 21], "replayed": True, "paths": 60},
     "one inception": {"every": [1, 3, 21], "replayed": True, "paths": 1},
-    "two underlyings": {"every": [1, 2, 6, 21, 63], "underlyings": ("CORVANE", "TESSARD"), "paths": 1500},
+    "two underlyings": {"every": [1, 2, 6, 21, 63], "underlyings": ("CORVANE", "TESSOVAR"), "paths": 1500},
 }
 _cache = {}
 
