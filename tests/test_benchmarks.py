@@ -18,7 +18,13 @@ def test_the_numpy_script_has_the_same_distribution_of_every_component():
     case, paths = desk(), 4096
     mine = simulate(**case, count=20_000, detail=True)
     theirs = ledger(case, paths)
-    names = {"vol_gap": "vol_gap", "sampling": "sampling", "remainder": "remainder", "lag": "lag", "spread": "costs.spread"}
+    names = {
+        "vol_gap": "vol_gap",
+        "sampling": "sampling",
+        "remainder": "remainder",
+        "lag": "lag",
+        "spread": "costs.spread",
+    }
     for name, component in names.items():
         ours = mine.detail[:, 0, COMPONENTS.index(component)]
         for s in range(1, len(ours)):
