@@ -12,6 +12,39 @@ from hedgesim.schedules import Schedule, compile_schedules
 
 LOOKS, DAYS = 504, 63
 EVERY = (1, 2, 4, 8, 16, 32, 63, 126, 252, 504)
+# Thirty more intervals, so that forty schedules are forty different ones.
+MORE = (
+    3,
+    5,
+    6,
+    7,
+    9,
+    10,
+    11,
+    12,
+    13,
+    14,
+    15,
+    17,
+    18,
+    20,
+    21,
+    22,
+    24,
+    27,
+    28,
+    30,
+    36,
+    40,
+    42,
+    48,
+    56,
+    72,
+    84,
+    100,
+    168,
+    336,
+)
 HALF_SPREAD = 2e-4
 HEDGE_VOL, REALISED_VOL = 0.22, 0.19
 RATE, YIELD, DRIFT, SPOT = 0.03, 0.01, 0.04, 100.0
@@ -39,9 +72,7 @@ def desk(positions: int = 20, schedules: int = 10) -> dict[str, Any]:
         expiry_s=grid.s[look],
         initial_units=np.zeros(1),
     )
-    rules = [Schedule(f"every {k} looks", "looks", k) for k in EVERY]
-    # Forty schedules: the ten intervals four times.
-    rules = [Schedule(f"{rule.name} #{n}", rule.kind, rule.amount) for n in range(schedules // 10) for rule in rules]
+    rules = [Schedule(f"every {k} looks", "looks", k) for k in (EVERY + MORE)[:schedules]]
     return {
         "market": market,
         "book": book,
