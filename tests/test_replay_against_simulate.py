@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from simulate_cases import random_experiment
 
 from hedgesim.book import gross_value
 from hedgesim.engine.inceptions import Inception, Laid
@@ -11,7 +12,6 @@ from hedgesim.engine.story import look_by_look
 from hedgesim.market import frozen
 from hedgesim.paths.prices import PriceHistory
 from hedgesim.tables import TOLERANCE
-from tests.simulate_cases import random_experiment
 
 PATHS = 64
 

@@ -4,12 +4,12 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from replay_cases import gross_values, random_costs, random_history, random_terms
 
 from hedgesim.engine.inceptions import Inceptions, lay_inceptions
 from hedgesim.engine.ledger import COST_COMPONENTS
 from hedgesim.engine.replay import COMPONENTS, replay_laid
 from hedgesim.engine.story import look_by_look, story
-from tests.replay_cases import gross_values, random_costs, random_history, random_terms
 
 EVERY_WAY = [
     pytest.param(remark, early, Inceptions(kind, amount), id=f"{remark}-{'early' if early else 'full'}-{kind}")

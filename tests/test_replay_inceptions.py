@@ -5,6 +5,7 @@ from datetime import date
 
 import numpy as np
 import pytest
+from replay_cases import random_costs, random_history, random_terms
 
 from hedgesim.book import Expiry, Position
 from hedgesim.engine.inceptions import EVERY_LOOK, InceptionError, Inceptions, lay_inceptions
@@ -12,7 +13,6 @@ from hedgesim.engine.replay import COMPONENTS, replay, replay_laid, stationary_r
 from hedgesim.errors import ExperimentError
 from hedgesim.market import frozen
 from hedgesim.schedules import Schedule, ScheduleError
-from tests.replay_cases import random_costs, random_history, random_terms
 
 WEEKLY = Schedule("every 5d", "days", 5.0)
 
