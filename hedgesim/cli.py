@@ -1,9 +1,11 @@
 """The commands: parse, call, print."""
 
+import signal
 import sys
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
+from types import FrameType
 
 import click
 
@@ -51,7 +53,7 @@ def run(
     quiet: bool,
 ) -> None:
     """Run the experiment in FILE and write its report."""
-    with _exit_status():
+    with _exit_status(), _terminated_as_interrupted():
         from hedgesim.experiment.run import run_file
 
         folder = run_file(
@@ -84,6 +86,20 @@ def schema() -> None:
     from hedgesim.experiment.schema import json_schema
 
     click.echo(json.dumps(json_schema(), indent=2))
+
+
+@contextmanager
+def _terminated_as_interrupted() -> Iterator[None]:
+    """Treat a request to terminate as Ctrl-C, so that what is half-written is cleared away."""
+
+    def interrupt(number: int, frame: FrameType | None) -> None:
+        raise KeyboardInterrupt
+
+    before = signal.signal(signal.SIGTERM, interrupt)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, before)
 
 
 @contextmanager

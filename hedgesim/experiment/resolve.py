@@ -58,6 +58,7 @@ class Replay:
     laid: "Laid"
     costs: CostTerms
     price_file: Path
+    seed: int
     notes: tuple[str, ...]
 
 
@@ -210,6 +211,7 @@ def _simulation(loaded: Loaded, paths: GbmPaths) -> Simulation:
     )
     if experiment.market.day_count == "business-252" and any(p.expiry.on for p in positions):
         notes.append("trading days to the expiry dates count Monday to Friday, without holidays")
+    notes += _open_notes(experiment, grid)
     names = experiment.names
     return Simulation(
         market=_market(experiment, [u.spot or np.nan for u in experiment.market.underlyings.values()]),
@@ -353,7 +355,25 @@ def _replay(loaded: Loaded, paths: PricePaths) -> Replay:
     except ScheduleError as error:
         problem = loaded.source.problem(("schedules", error.index), error.message, error.advice)
         raise ExperimentError([problem]) from None
-    return Replay(laid=laid, costs=_cost_terms(experiment), price_file=file, notes=laid.notes)
+    return Replay(
+        laid=laid,
+        costs=_cost_terms(experiment),
+        price_file=file,
+        seed=paths.seed,
+        notes=(*laid.notes, *_open_notes(experiment, laid.inceptions[0].grid)),
+    )
+
+
+def _open_notes(experiment: Experiment, grid: LookGrid) -> list[str]:
+    """Schedules that name the open where it is the same look as a close."""
+    if not np.array_equal(grid.is_open, grid.is_close):
+        return []
+    same = [rule.name for rule in experiment.schedules if isinstance(rule, schema.At) and "open" in rule.at]
+    if isinstance(experiment.paths, GbmPaths):
+        told = "trades as `every: 1d` does: without overnight variance an open is the close before it"
+    else:
+        told = "trades at every price: each is both the open and the close of its day"
+    return [f"'{name}' {told}" for name in same]
 
 
 def describe(loaded: Loaded) -> list[str]:
@@ -396,9 +416,11 @@ def market_lines(market: Market, book: Book, currency: str) -> list[str]:
         forward = float(market.spot[u] * np.exp(market.growth[u] * last))
         spot = float(market.spot[u])
         kind = "future" if market.is_future[u] else "spot"
+        size = int(mine.sum())
         net = {key: float(getattr(per_position, key)[mine].sum()) for key in ("value", "delta", "gamma", "vega")}
         lines += [
-            f"{name}: {kind} {spot:,.6g}, forward {forward:,.6g} in {last:.4g} years, {int(mine.sum())} positions",
+            f"{name}: {kind} {spot:,.6g}, forward {forward:,.6g} in {last:.4g} years, "
+            f"{size} position{'s' * (size != 1)}",
             f"  value at mark {net['value']:,.2f} {currency}, initial hedge {book.initial_units[u]:,.6g} units",
             f"  net delta {net['delta']:,.1f} units ({net['delta'] * spot:,.0f} {currency})",
             f"  net gamma {net['gamma'] * spot * 0.01:,.1f} units for a 1% move of the price",

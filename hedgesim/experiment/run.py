@@ -18,7 +18,7 @@ from hedgesim.engine.ledger import Ledger, Story
 from hedgesim.engine.replay import replay_laid
 from hedgesim.engine.simulate import simulate
 from hedgesim.engine.story import story
-from hedgesim.experiment.folder import FINDINGS, refuse_foreign, replaced_at_once
+from hedgesim.experiment.folder import FINDINGS, refuse_foreign, refuse_unwritable, replaced_at_once
 from hedgesim.experiment.loader import Loaded, dump_experiment, load_experiment
 from hedgesim.experiment.progress import progress
 from hedgesim.experiment.resolve import (
@@ -132,7 +132,9 @@ def run_experiment(
             progress=advance,
         )
     else:
-        ledger = replay_laid(plan.laid, costs=plan.costs, threads=threads)
+        ledger = replay_laid(plan.laid, costs=plan.costs, seed=plan.seed, threads=threads)
+        if advance is not None:
+            advance(ledger.count)
     simulated = time.monotonic()
     done = study(ledger, _compiled(plan), _settings(loaded, plan, ledger))
     seconds = {"prepare": resolved - start, "engine": simulated - resolved, "study": time.monotonic() - simulated}
@@ -176,9 +178,12 @@ def run_file(
     folder = out if out is not None else Path("reports") / path.stem
     plan = resolve(loaded)
     hashes = _hashes(loaded, plan)
+    # Before the work, not after it.
+    refuse_unwritable(folder)
     refuse_foreign(folder, digest=hashes["experiment"], overwrite=overwrite)
     count = plan.count if isinstance(plan, Simulation) else len(plan.laid.inceptions)
-    with progress("paths", count, quiet=quiet) as advance:
+    label = "paths" if isinstance(plan, Simulation) else "inceptions"
+    with progress(label, count, quiet=quiet) as advance:
         result = run_experiment(loaded, threads=threads, detail=ledger, advance=advance, plan=plan)
     with replaced_at_once(folder) as fresh:
         _write(result, fresh, folder, hashes=hashes, ledger=ledger)
@@ -192,13 +197,14 @@ def summary(result: Result) -> list[str]:
     """The finding and the schedules in a dozen lines."""
     frame = result.schedules
     cash = result.loaded.experiment.report.currency
-    lines = [
-        result.sentence,
-        "",
-        f"{'schedule':<20}{'trades':>9}{'cost ' + cash:>15}{'std ' + cash:>15}{'ES 97.5':>15}",
-    ]
-    for row in frame.itertuples():
-        lines.append(f"{row.schedule:<20}{row.trades:>9.1f}{row.cost_mean:>15,.0f}{row.std:>15,.0f}{row.es975:>15,.0f}")
+    # A single life has an outcome and no spread.
+    shown = {"std": "std", "es975": "ES 97.5 %"} if result.study.choice.comparable else {"mean": "P&L"}
+    shown = {"cost_mean": "cost", **shown}
+    heads = "".join(f"{f'{head} {cash}':>15}" for head in shown.values())
+    lines = [result.sentence, "", f"{'schedule':<20}{'trades':>9}{heads}"]
+    for _, row in frame.iterrows():
+        cells = "".join(f"{row[name]:>15,.0f}" for name in shown)
+        lines.append(f"{row['schedule']:<20}{row['trades']:>9.1f}{cells}")
     lines += [f"warning: {text}" for text in result.study.warnings]
     lines += [f"note: {text}" for text in result.plan.notes]
     return [*lines, ""]
@@ -310,8 +316,8 @@ def _versions() -> dict[str, str]:
     }
 
 
-def _seed(plan: Simulation | Replay) -> int | None:
-    return plan.source.seed if isinstance(plan, Simulation) else None
+def _seed(plan: Simulation | Replay) -> int:
+    return plan.source.seed if isinstance(plan, Simulation) else plan.seed
 
 
 def _facts(result: Result, hashes: dict[str, str]) -> "RunFacts":
@@ -380,9 +386,13 @@ def _method_lines(result: Result) -> list[str]:
     else:
         lines += [
             "paths: the prices as given; closed forms at every look",
-            f"errors: stationary block bootstrap over inceptions, {len(ledger.replicates.mean)} resamples",
+            f"errors: stationary block bootstrap over inceptions, {len(ledger.replicates.mean)} resamples"
+            if ledger.count > 1
+            else "errors: none, as there is one life",
         ]
-    lines.append(f"residual delta and daily P&L: from the first {ledger.watch.paths:,} paths")
+    lives = "paths" if ledger.engine == "simulate" else "inceptions"
+    if ledger.count > 1:
+        lines.append(f"residual delta and daily P&L: from the first {ledger.watch.paths:,} {lives}")
     return lines
 
 
@@ -394,6 +404,8 @@ def _stories(result: Result) -> tuple[tuple[Story, Story], "tuple[tuple[OptionMa
     totals = ledger.totals[schedule]
     order = np.argsort(totals, kind="stable")
     wanted = (("an ordinary path: the median P&L", 0.5), ("a bad path: the 1 % quantile of P&L", 0.01))
+    if ledger.count == 1:
+        wanted = (("the one path", 0.5), ("the one path", 0.5))
     told, marks = [], []
     for label, level in wanted:
         path = int(order[int(level * (len(order) - 1))])

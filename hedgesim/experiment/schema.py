@@ -302,6 +302,9 @@ class PricePaths(Section):
     inceptions: Annotated[
         Inceptions | Literal["once"], WrapValidator(lambda value, handler: _read_inceptions(value))
     ] = Field(default="once", description="once, or {every: 1d} for rolling inceptions over the history")
+    seed: Annotated[int, number(least=0, below=2**64, whole=True)] = Field(
+        default=1, description="seed of the bootstrap behind the errors; the P&L itself holds no chance"
+    )
     horizon: _Term | None = Field(
         default=None, description="end of the study: a duration, years or a date; default last expiry"
     )

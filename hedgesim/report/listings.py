@@ -59,6 +59,8 @@ def schedule_tables(view: View, facts: RunFacts) -> list[Sheet]:
             Column("trades", [count(view.trades[r]) for r in rows]),
             Column("mean P&L", [money_with_error(view.mean[r], view.mean_se[r]) for r in rows]),
             Column(view.cost_name, [money_with_error(view.cost[r], view.cost_se[r]) for r in rows]),
+        ]
+        spread = [
             Column("std", [money_with_error(view.std[r], view.std_se[r]) for r in rows]),
             Column("p01", [money(view.p01[r]) for r in rows]),
             Column("p05", [money(view.p05[r]) for r in rows]),
@@ -67,13 +69,14 @@ def schedule_tables(view: View, facts: RunFacts) -> list[Sheet]:
             Column("std floor", [money(root(view.floor[r])) for r in rows]),
             Column("removable", [style.share_with_error(view.share[r], view.share_se[r]) for r in rows]),
         ]
+        columns += spread if view.varied else []
         sheet.table(
             MARGIN_MM,
             sheet.top,
             TEXT_WIDTH_MM,
             columns,
             size=9.0,
-            strong=[k for k, r in enumerate(rows) if r == view.best],
+            strong=[k for k, r in enumerate(rows) if r == view.best and view.varied],
         )
         sheets.append(sheet)
     return sheets

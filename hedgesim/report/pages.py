@@ -37,7 +37,7 @@ def finding(view: View, facts: RunFacts) -> list[Sheet]:
         sheet.top,
         table_width,
         key_columns(view, rows),
-        strong=[k for k, r in enumerate(rows) if r == view.best],
+        strong=[k for k, r in enumerate(rows) if r == view.best and view.varied],
     )
     note = f"Amounts per life in {facts.currency}, discounted to the start."
     if len(rows) < len(view.names):
@@ -76,6 +76,8 @@ def _closest(view: View, most: int) -> list[int]:
 
 
 def _reading(view: View) -> list[tuple[str, str]]:
+    if not view.varied:
+        return [("One inception", "One outcome per schedule: no variance, no errors and no law.")]
     parts = [("What the cost of risk says", view.cost_of_risk_words)]
     ties = [view.names[k] for k in range(len(view.names)) if view.tied[k] and k != view.best]
     if ties:
@@ -90,15 +92,20 @@ def _reading(view: View) -> list[tuple[str, str]]:
         parts.append(("How sure", f"At {percent(view.confidence)} confidence no other schedule is as good."))
     if view.law is not None:
         parts.append(("Law", figures.law_title(view) + "."))
-    elif view.varied:
-        parts.append(("Law", style.clipped(view.law_note, 220)))
     else:
-        parts.append(("One inception", "One outcome per schedule: no variance, no errors and no law."))
+        parts.append(("Law", style.clipped(view.law_note, 220)))
     return parts
 
 
 def key_columns(view: View, rows: Sequence[int]) -> list[Column]:
-    """The columns that a decision needs."""
+    """The columns that a decision needs; a single inception has outcomes only."""
+    if not view.varied:
+        return [
+            Column("schedule", [view.names[r] for r in rows], "left"),
+            Column("trades", [count(view.trades[r]) for r in rows]),
+            Column(view.cost_name.replace("mean ", ""), [money(view.cost[r]) for r in rows]),
+            Column("P&L", [money(view.mean[r]) for r in rows]),
+        ]
     amount = money if view.risk_name != "variance" else _large
     return [
         Column("schedule", [view.names[r] for r in rows], "left"),
@@ -192,17 +199,17 @@ def _worth_showing(view: View, underlying: str) -> list[Share]:
 
 def _share_columns(rows: Sequence[Share], best: int) -> list[Column]:
     noise = _ROUNDING * max((float(np.nan_to_num(s.std[best])) for s in rows), default=0.0)
-    return [
+    columns = [
         Column("component", [style.words(s.component) for s in rows], "left"),
-        Column("mean \u00b1 1 se", [_beyond_rounding(s.mean[best], s.mean_se[best]) for s in rows]),
+        Column("mean \u00b1 1 se", [money_with_error(s.mean[best], s.mean_se[best]) for s in rows]),
+    ]
+    if all(np.isnan(s.std[best]) for s in rows):
+        return columns
+    return [
+        *columns,
         Column("std", [money(0.0 if s.std[best] < noise else s.std[best]) for s in rows]),
         Column("share", [percent(s.share[best]) for s in rows]),
     ]
-
-
-def _beyond_rounding(value: float, error: float) -> str:
-    """A mean with its error; one that is the same on every path has an error of rounding only, which says nothing."""
-    return money(value) if error < _ROUNDING * abs(value) else money_with_error(value, error)
 
 
 def distribution(view: View, facts: RunFacts) -> list[Sheet]:

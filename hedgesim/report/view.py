@@ -225,7 +225,7 @@ def _law_note(law: PowerLaw | None, reason: str) -> str:
     if np.isfinite(law.chi2):
         parts.append(f"chi-squared {law.chi2:.3g} on {law.dof} degrees of freedom")
     if law.misfit:
-        parts.append("the points are off the law by more than their errors, its own error is widened")
+        parts.append("the points bend away from it, its error is widened")
     if law.left_out:
         by_reason: dict[str, list[str]] = {}
         for name, why in law.left_out:
@@ -239,7 +239,9 @@ def _law_note(law: PowerLaw | None, reason: str) -> str:
 
 
 def mark_of(view: View, row: int) -> str:
-    """`chosen`, `tied` and `efficient` in words for a table."""
+    """`chosen`, `tied` and `efficient` in words for a table; nothing is chosen from a single inception."""
+    if not view.varied:
+        return ""
     marks = ["chosen"] if row == view.best else ["tied"] if view.tied[row] else []
     if view.efficient[row] and row != view.best:
         marks.append("efficient")

@@ -1,6 +1,6 @@
 """The price of risk: which schedule to run, what finer trading pays for, and how sure the choice is."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from itertools import pairwise
 
 import numpy as np
@@ -12,6 +12,7 @@ from hedgesim.study.projection import critical_value, error_covariance, members,
 from hedgesim.study.settings import Settings
 
 ES975_SHARE = 0.025
+ONE_LIFE = "one life gives no distribution: no risk, no errors, and no choice between the schedules"
 
 
 @dataclass(frozen=True)
@@ -60,8 +61,10 @@ class Choice:
     price, price_se : extra mean cost per unit of risk removed by going there, nan where there is none
     best_from, best_to : the schedule is best at costs of risk between these, nan when not supported
     critical : standard errors that a difference must exceed to leave the tied set
+    comparable : false with a single life, which has no risk: then nothing is chosen, and `chosen` is the schedule that
+        trades most, as an example
     chosen : index of the best schedule within the limit; the one of least risk when none is
-    limit_met : some schedule is within the limit
+    limit_met : some schedule is within the limit, or there is none to meet
     warnings : what a reader of the choice must know
     """
 
@@ -83,6 +86,7 @@ class Choice:
     best_from: Floats
     best_to: Floats
     critical: float
+    comparable: bool
     chosen: int
     limit_met: bool
     warnings: tuple[str, ...]
@@ -139,17 +143,21 @@ def _cost_by_path(ledger: Ledger, schedules: Ints, source: str) -> Floats | None
 def choose(ledger: Ledger, schedules: Ints, distribution: Distribution, settings: Settings) -> Choice:
     """Compare the schedules with indices `schedules` at the settings' cost of risk and limit."""
     figures = estimates(ledger, schedules, distribution, settings)
+    comparable = ledger.count > 1
+    if not comparable:
+        figures = replace(figures, risk=frozen(np.full(len(schedules), np.nan)))
     n = len(schedules)
     unit, none = np.eye(n), np.zeros(n)
     cost_of_risk = settings.cost_of_risk
     objective = figures.mean_cost + cost_of_risk * figures.risk
-    within = np.ones(n, dtype=bool) if settings.limit is None else figures.risk <= settings.limit
+    limit = settings.limit if comparable else None
+    within = np.ones(n, dtype=bool) if limit is None else figures.risk <= limit
     limit_met = bool(within.any())
     candidates = np.flatnonzero(within) if limit_met else np.arange(n)
     # When none meets the limit, the choice and its ties are about risk alone.
     on_cost, on_risk = (1.0, cost_of_risk) if limit_met else (0.0, 1.0)
     score = on_cost * figures.mean_cost + on_risk * figures.risk
-    chosen = int(candidates[np.argmin(score[candidates])])
+    chosen = int(candidates[np.argmin(score[candidates])]) if comparable else int(np.argmax(ledger.trades[schedules]))
     critical = critical_value(ledger.replicates, (1.0 - settings.confidence) / max(1, len(candidates) - 1))
     contrasts = unit - unit[chosen]
     tied = np.zeros(n, dtype=bool)
@@ -161,7 +169,10 @@ def choose(ledger: Ledger, schedules: Ints, distribution: Distribution, settings
     supported, best_from, best_to = _supported(figures, efficient)
     next_finer, price, price_se = _prices(figures, efficient)
     risk_se = np.array([figures.standard_error(none, row) for row in unit])
-    warnings = _warnings(settings, figures.risk, risk_se, critical, limit_met, bool(np.isnan(risk_se).any()))
+    unknown = bool(np.isnan(risk_se).any())
+    warnings: tuple[str, ...] = (ONE_LIFE,)
+    if comparable:
+        warnings = _warnings(settings, figures.risk, risk_se, critical, limit_met, unknown)
     return Choice(
         mean_cost=figures.mean_cost,
         mean_cost_se=frozen([figures.standard_error(row, none) for row in unit]),
@@ -181,6 +192,7 @@ def choose(ledger: Ledger, schedules: Ints, distribution: Distribution, settings
         best_from=frozen(best_from),
         best_to=frozen(best_to),
         critical=critical,
+        comparable=comparable,
         chosen=chosen,
         limit_met=limit_met,
         warnings=warnings,

@@ -5,9 +5,10 @@ from typing import Any
 
 import numpy as np
 
+from hedgesim.market import Floats
 from hedgesim.study.choice import annual_hurdle
 from hedgesim.study.law import Offset, PowerLaw
-from hedgesim.study.money import money_with_error, percent
+from hedgesim.study.money import money, money_with_error, percent
 from hedgesim.study.settings import RiskKind
 from hedgesim.study.studies import Study
 
@@ -21,26 +22,32 @@ _RISK_WORDS: dict[RiskKind, str] = {
 def headline(study: Study) -> dict[str, Any]:
     """Every headline figure as `{"value", "se", "unit"}`, the choice and its confidence, the law, the warnings.
 
-    Plain JSON: unknown and unbounded numbers are null. Figures are those of the chosen schedule unless named otherwise.
+    Plain JSON: unknown and unbounded numbers are null. Figures are those of the chosen schedule unless named otherwise;
+    a single life chooses none, and then they are null.
     """
     choice, figures, parts = study.choice, study.distribution, study.variances
     best = choice.chosen
     cash = study.settings.currency or "currency"
     cash2 = f"{cash}^2"
     unit = cash2 if study.settings.risk == "variance" else cash
+
+    def figure(values: Floats, errors: Floats, unit: str) -> dict[str, Any]:
+        known = choice.comparable
+        return _figure(values[best] if known else math.nan, errors[best] if known else math.nan, unit)
+
     return {
         "engine": study.engine,
         "count": study.count,
         "sentence": sentence(study),
         "choice": {
-            "schedule": study.schedules[best],
-            "mean_cost": _figure(choice.mean_cost[best], choice.mean_cost_se[best], cash),
+            "schedule": study.schedules[best] if choice.comparable else None,
+            "mean_cost": figure(choice.mean_cost, choice.mean_cost_se, cash),
             "mean_cost_counts": "costs and funding" if study.settings.mean == "costs" else "minus the total P&L",
-            "risk": _figure(choice.risk[best], choice.risk_se[best], unit),
+            "risk": figure(choice.risk, choice.risk_se, unit),
             "risk_measure": study.settings.risk,
-            "objective": _figure(choice.objective[best], choice.objective_se[best], cash),
+            "objective": figure(choice.objective, choice.objective_se, cash),
             "limit": _plain(study.settings.limit),
-            "limit_met": choice.limit_met,
+            "limit_met": choice.limit_met if choice.comparable else None,
             "tied": tied(study),
             "confidence": study.settings.confidence,
             "best_at_cost_of_risk": {"from": _plain(choice.best_from[best]), "to": _plain(choice.best_to[best])},
@@ -51,14 +58,14 @@ def headline(study: Study) -> dict[str, Any]:
             "annual_hurdle": _plain(annual_hurdle(study.settings)),
             "years": study.settings.years,
         },
-        "mean": _figure(figures.mean[best], figures.mean_se[best], cash),
-        "std": _figure(figures.std[best], figures.std_se[best], cash),
-        "es95": _figure(figures.es95[best], figures.es95_se[best], cash),
-        "es975": _figure(figures.es975[best], figures.es975_se[best], cash),
-        "gross_variance": _figure(parts.value.gross[best], parts.error.gross[best], cash2),
-        "floor_variance": _figure(parts.value.floor[best], parts.error.floor[best], cash2),
-        "removable": _figure(parts.value.removable[best], parts.error.removable[best], cash2),
-        "removable_share": _figure(parts.removable_share[best], parts.removable_share_se[best], "of gross variance"),
+        "mean": figure(figures.mean, figures.mean_se, cash),
+        "std": figure(figures.std, figures.std_se, cash),
+        "es95": figure(figures.es95, figures.es95_se, cash),
+        "es975": figure(figures.es975, figures.es975_se, cash),
+        "gross_variance": figure(parts.value.gross, parts.error.gross, cash2),
+        "floor_variance": figure(parts.value.floor, parts.error.floor, cash2),
+        "removable": figure(parts.value.removable, parts.error.removable, cash2),
+        "removable_share": figure(parts.removable_share, parts.removable_share_se, "of gross variance"),
         "below_look_variance_estimate": _plain(parts.below_look),
         "law": _law(study.frequency.law, study.frequency.reason, cash2),
         "warnings": list(study.warnings),
@@ -68,6 +75,8 @@ def headline(study: Study) -> dict[str, Any]:
 def sentence(study: Study) -> str:
     """The finding in a trader's words; the figures after ± are one standard error."""
     choice, figures, settings = study.choice, study.distribution, study.settings
+    if not choice.comparable:
+        return _one_life(study)
     best = choice.chosen
     cash = settings.currency
     cost = float(choice.mean_cost[best])
@@ -93,8 +102,25 @@ def sentence(study: Study) -> str:
     return "; ".join(clauses) + "."
 
 
+def _one_life(study: Study) -> str:
+    """What a single life can say: its outcomes, and that they decide nothing."""
+    total, cost, cash = study.distribution.mean, study.choice.mean_cost, study.settings.currency
+    low, high = int(np.argmin(total)), int(np.argmax(total))
+    if len(total) == 1:
+        outcome = f"{study.schedules[0]} ends at {money(float(total[0]), currency=cash)}"
+    else:
+        ends = [f"{money(float(total[i]), currency=cash)} ({study.schedules[i]})" for i in (low, high)]
+        outcome = f"the P&L runs from {ends[0]} to {ends[1]}"
+    if study.settings.mean == "costs":
+        paid = [money(float(x), currency=cash) for x in (cost.min(), cost.max())]
+        outcome += f", costs {'of ' + paid[0] if len(total) == 1 else f'from {paid[0]} to {paid[1]}'} included"
+    return f"One life gives no distribution, so that no schedule is called best: {outcome}."
+
+
 def tied(study: Study) -> list[str]:
-    """Schedules that cannot be told from the chosen one, itself left out."""
+    """Schedules that cannot be told from the chosen one, itself left out; none when nothing is chosen."""
+    if not study.choice.comparable:
+        return []
     flags = study.choice.tied
     return [name for i, name in enumerate(study.schedules) if flags[i] and i != study.choice.chosen]
 
@@ -124,7 +150,10 @@ def _floor(study: Study) -> str:
     if math.isnan(share):
         return ""
     if not study.variances.floor_known:
-        return f"; trading at every look would change its variance before costs by {percent(-share)}"
+        if share == 0.0:
+            return "; it is the finest schedule that the prices allow"
+        change = "less than 0.1 %" if abs(share) < 0.0005 else percent(-share)
+        return f"; trading at every look would change its variance before costs by {change}"
     if share <= 0.0:
         return ", whose variance before costs trading more would not reduce"
     return f", {percent(1.0 - share)} of whose variance before costs no schedule removes"

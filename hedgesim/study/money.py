@@ -4,6 +4,7 @@ import math
 
 _SCALES = ((1e9, "bn"), (1e6, "m"), (1e3, "k"))
 _UNKNOWN = "n/a"
+_ROUNDING = 1e-9
 
 
 def money(value: float, *, currency: str = "") -> str:
@@ -27,9 +28,10 @@ def money(value: float, *, currency: str = "") -> str:
 def money_with_error(value: float, error: float, *, currency: str = "") -> str:
     """`value` with its standard error in the same scale, as in `85.3k (±0.3k)`.
 
-    The value carries as many decimals as its error has up to the first figure; without an error see `money`.
+    The value carries as many decimals as its error has up to the first figure; without an error see `money`. An error
+    below 1e-9 of the value is the rounding of equal outcomes, and counts as none.
     """
-    if not (math.isfinite(value) and math.isfinite(error)) or error <= 0.0:
+    if not (math.isfinite(value) and math.isfinite(error)) or error <= _ROUNDING * abs(value):
         return money(value, currency=currency)
     scale, letter = _scale(value)
     leading = float(f"{error / scale:.0e}")

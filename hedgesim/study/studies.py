@@ -75,7 +75,10 @@ def study(ledger: Ledger, schedules: Compiled, settings: Settings) -> Study:
     choice = choose(ledger, shown, figures, settings)
     warnings = list(choice.warnings)
     if law.law is not None and law.law.misfit:
-        warnings.append("the variances are off the power law by more than their errors; its own error is widened")
+        warnings.append(
+            "at this precision the variances bend away from a single power of the number of trades, which holds for "
+            "many trades only: the error of the exponent is widened"
+        )
     return Study(
         engine=ledger.engine,
         schedules=tuple(ledger.schedules[i] for i in shown),

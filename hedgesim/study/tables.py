@@ -85,7 +85,7 @@ def schedules_table(study: Study, *, exact: Exact | None = None) -> pd.DataFrame
         "within_limit": c.within_limit,
         "tied": c.tied,
         "efficient": c.efficient,
-        "chosen": np.arange(len(study.schedules)) == c.chosen,
+        "chosen": (np.arange(len(study.schedules)) == c.chosen) & c.comparable,
     }
     return pd.DataFrame(columns)
 
