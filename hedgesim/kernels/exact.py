@@ -1,0 +1,394 @@
+"""Backward recursion of the exact engine: conditional moments of the hedged P&L on a lattice of log prices.
+
+One step leads from a trade to the next. Given X_k = x, what the book still earns is
+
+    h(x) I + pay(X_k+1) - kappa(X_k+1) |H(X_k+1) - h(x) - delivered(X_k+1)| - ticket + rest(X_k+1)
+
+with I the discounted gain of one hedge unit. The lattice is uniform in log X and the step of log X is normal, so each
+expectation is a trapezoid sum with weights that depend on the distance alone. For smooth integrands the sum converges
+faster than any power of the spacing (Trefethen and Weideman 2014, SIAM Review 56); see kernels.breaks for the others.
+"""
+
+import math
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from hedgesim.kernels.breaks import (
+    BEHIND,
+    COSTS,
+    FOURTH,
+    GROSS,
+    HEDGE,
+    LOG_X,
+    NET,
+    PAID,
+    SECOND,
+    STATE_ROWS,
+    STENCIL,
+    THIRD,
+    UNIT_COST,
+    Breaks,
+    X,
+    correct_means,
+    correct_powers,
+    find_breaks,
+)
+from hedgesim.kernels.jit import device, kernel
+from hedgesim.kernels.simulate import Payoff
+from hedgesim.kernels.tables import Table, lookup
+from hedgesim.kernels.vector_math import exp, fma
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.int64]
+
+_BLOCK = 128
+
+# Results of `run_schedule`.
+MOMENT_ROWS = ("gross", "costs", "second", "third", "fourth", "gross_gross", "gross_costs", "costs_costs")
+
+
+class Lattice(NamedTuple):
+    """Nodes origin + n spacing of log X that are worked off at each look (or trade), n from `low` to `high`.
+
+    `pad_low` and `pad_high` are the nodes that steps into the look can reach, a multiple of `kernels.rows.LANES` of
+    them; moments are extrapolated there. `mean` and `sd` are those of log X at the look, the mean less the origin.
+    """
+
+    origin: float
+    spacing: float
+    low: Ints
+    high: Ints
+    pad_low: Ints
+    pad_high: Ints
+    mean: Floats
+    sd: Floats
+
+
+class Steps(NamedTuple):
+    """Steps between looks (or trades); arrays are by step unless said otherwise.
+
+    Attributes
+    ----------
+    kind : row of the tables that steps of one mean and sd share
+    first, last : (kind,) offsets, in nodes, that a step can reach
+    density : (kind, offset) lattice weights of the step from offset `first` on
+    edges : (kind, cell, bin, STENCIL) see `edge_weights`; empty when no integrand breaks
+    start : first entry of `gain` and `inner`, which begin BEHIND + 1 nodes before offset `first`
+    gain : expected discounted gain of one hedge unit over X_k, given both ends of the step, by offset
+    inner : variance of the same, given both ends
+    """
+
+    kind: Ints
+    first: Ints
+    last: Ints
+    density: Floats
+    edges: Floats
+    start: Ints
+    gain: Floats
+    inner: Floats
+
+
+class Trading(NamedTuple):
+    """What trades of one underlying are; arrays are by trade.
+
+    Attributes
+    ----------
+    look : look of the trade
+    inverse_weight : hedge units per unit of -dU/dX; 0 at the last trade, which unwinds
+    spread : discounted half-spread of one unit over X
+    unit, ticket : discounted commission of one unit, and ticket charge
+    smallest : fewer units than this cost no ticket
+    initial : units held before the first trade
+    """
+
+    look: Ints
+    inverse_weight: Floats
+    spread: Floats
+    unit: Floats
+    ticket: Floats
+    smallest: float
+    initial: float
+
+
+class Strikes(NamedTuple):
+    """Strikes that settle at each trade, as lattice positions, ascending; see Payoff for the lines between them.
+
+    `first` and `size` by trade; `cell` and `theta` by strike; `line` first row of Payoff.line, by trade.
+    """
+
+    first: Ints
+    size: Ints
+    line: Ints
+    cell: Ints
+    theta: Floats
+
+
+@device
+def _accumulate_means(
+    weight: float, paid: Floats, costs: Floats, unit_cost: Floats, net: Floats, held: Floats, smallest: float,
+    ticket: float, gross_out: Floats, costs_out: Floats,
+) -> None:  # fmt: skip
+    """Add one offset's share of the expected gross and costs of each source node of a block."""
+    n = len(held)
+    for i in range(n):
+        gross_out[i] = fma(weight, paid[i], gross_out[i])
+    for i in range(n):
+        size = abs(net[i] - held[i])
+        charge = fma(-unit_cost[i], size, costs[i]) - (ticket if size > smallest else 0.0)
+        costs_out[i] = fma(weight, charge, costs_out[i])
+
+
+@device
+def _deviations(
+    gain: float, paid: Floats, costs: Floats, unit_cost: Floats, net: Floats, held: Floats, held_x: Floats,
+    smallest: float, ticket: float, gross_mean: Floats, costs_mean: Floats, d_gross: Floats, d_costs: Floats,
+) -> None:  # fmt: skip
+    """Deviations of gross and costs from their conditional means, at one offset from each source node."""
+    n = len(held)
+    for i in range(n):
+        d_gross[i] = fma(held_x[i], gain, paid[i]) - gross_mean[i]
+    for i in range(n):
+        size = abs(net[i] - held[i])
+        charge = fma(-unit_cost[i], size, costs[i]) - (ticket if size > smallest else 0.0)
+        d_costs[i] = charge - costs_mean[i]
+
+
+@device
+def _accumulate_squares(weight: float, a: Floats, b: Floats, out: Floats) -> None:
+    for i in range(len(a)):
+        out[i] = fma(weight * a[i], b[i], out[i])
+
+
+@device
+def _accumulate_powers(
+    weight: float, inner: float, held_x: Floats, second: Floats, third: Floats, fourth: Floats,
+    d_gross: Floats, d_costs: Floats, out: Floats, deviation: Floats, spread: Floats,
+) -> None:  # fmt: skip
+    """Add one offset's share of the central moments of the total; `out` is (3, source), the last two are scratch."""
+    n = len(held_x)
+    for i in range(n):
+        deviation[i] = d_gross[i] + d_costs[i]
+    for i in range(n):
+        spread[i] = fma(held_x[i] * held_x[i], inner, second[i])
+    for i in range(n):
+        out[0, i] = fma(weight, fma(deviation[i], deviation[i], spread[i]), out[0, i])
+    for i in range(n):
+        t = deviation[i]
+        out[1, i] = fma(weight, fma(t, fma(t, t, 3.0 * spread[i]), third[i]), out[1, i])
+    for i in range(n):
+        # The gain given both ends of a step counts as normal beyond its variance: fourth moment 3 variance^2.
+        t = deviation[i]
+        own = spread[i] - second[i]
+        rest = fma(t * t, fma(t, t, 6.0 * spread[i]), 4.0 * t * third[i])
+        rest += own * fma(3.0, own, 6.0 * second[i])
+        out[2, i] = fma(weight, rest + fourth[i], out[2, i])
+
+
+@device
+def _fill_known(
+    state: Floats, lattice: Lattice, k: int, trading: Trading, slope: Table, underlying: int,
+    cell: NDArray[np.int32], part: Floats, scratch: Floats,
+) -> None:  # fmt: skip
+    """Price, hedge and unit cost at the nodes of trade k, padding included."""
+    low, n = lattice.pad_low[k], lattice.pad_high[k] - lattice.pad_low[k] + 1
+    for i in range(n):
+        state[LOG_X, i] = fma(lattice.spacing, np.float64(low + i), lattice.origin)
+    for i in range(n):
+        state[X, i] = exp(state[LOG_X, i])
+    units = -trading.inverse_weight[k]
+    if units != 0.0:
+        lookup(slope, underlying, trading.look[k], state[LOG_X, :n], cell, part, state[HEDGE, :n], scratch[:n])
+        for i in range(n):
+            state[HEDGE, i] *= units
+    else:
+        state[HEDGE, :n] = 0.0
+    for i in range(n):
+        state[UNIT_COST, i] = fma(trading.spread[k], state[X, i], trading.unit[k])
+
+
+@device
+def _settle_state(state: Floats, lattice: Lattice, k: int, strikes: Strikes, lines: Floats, node_line: Ints) -> int:
+    """Add what settles at trade k to the gross P&L and to the units in hand; returns the number of strikes."""
+    low, n = lattice.pad_low[k], lattice.pad_high[k] - lattice.pad_low[k] + 1
+    size, first = strikes.size[k], strikes.first[k]
+    state[PAID, :n] = state[GROSS, :n]
+    state[NET, :n] = state[HEDGE, :n]
+    if size == 0:
+        return 0
+    row = 0
+    for i in range(n):
+        while row < size and strikes.cell[first + row] < low + i:
+            row += 1
+        node_line[i] = row
+        line = lines[strikes.line[k] + row]
+        state[PAID, i] += fma(line[1], state[X, i], line[0])
+        state[NET, i] -= line[2]
+    return size
+
+
+@device
+def _extend(state: Floats, low: int, high: int, n: int) -> None:
+    """Carry the moments on beyond the nodes low .. high: gross P&L straight in X, the others level."""
+    for row in range(COSTS, FOURTH + 1):
+        for i in range(low):
+            state[row, i] = state[row, low]
+        for i in range(high + 1, n):
+            state[row, i] = state[row, high]
+    x, gross = state[X], state[GROSS]
+    rise = (gross[low + 1] - gross[low]) / (x[low + 1] - x[low]) if high > low else 0.0
+    for i in range(low):
+        gross[i] = gross[low] + rise * (x[i] - x[low])
+    rise = (gross[high] - gross[high - 1]) / (x[high] - x[high - 1]) if high > low else 0.0
+    for i in range(high + 1, n):
+        gross[i] = gross[high] + rise * (x[i] - x[high])
+
+
+@kernel
+def run_schedule(
+    underlying: int,
+    lattice: Lattice,
+    steps: Steps,
+    trading: Trading,
+    strikes: Strikes,
+    slope: Table,
+    mark_slope: Table,
+    mark_strike: Table,
+    payoff: Payoff,
+    break_room: int,
+    out: Floats,
+) -> None:
+    """Moments of the P&L of one underlying under one schedule, seen from the first trade.
+
+    Parameters
+    ----------
+    lattice, trading, strikes : by trade
+    steps : from each trade to the next
+    slope : P at the hedge vols
+    mark_slope, mark_strike : P and Q at the mark vols, at the last trade, for what is still open there
+    break_room : most breaks that the steps from one source node can meet
+    out : (MOMENT_ROWS,), overwritten: expected gross and costs, entry included; central moments of the total; variances
+        and covariance of gross and costs, from the expected conditional ones under the known law of X
+    """
+    trades = len(trading.look)
+    size = 0
+    for k in range(trades):
+        size = max(size, lattice.pad_high[k] - lattice.pad_low[k] + 1)
+    both = np.zeros((2, STATE_ROWS, size))
+    node_line = np.zeros(size, dtype=np.int64)
+    cell, part, scratch = np.empty(size, dtype=np.int32), np.empty(size), np.empty(size)
+    room = _BLOCK * break_room
+    breaks = Breaks(
+        np.empty(room, dtype=np.int64),
+        np.empty(room, dtype=np.int64),
+        np.empty((room, 2), dtype=np.int64),
+        np.empty((room, 2)),
+        np.empty((room, 2)),
+        np.empty((room, STENCIL)),
+        np.empty((room, 2, STENCIL)),
+        np.empty((room, 2, STENCIL)),
+    )
+    held, held_x = np.empty(_BLOCK), np.empty(_BLOCK)
+    d_gross, d_costs, deviation, spread = np.empty(_BLOCK), np.empty(_BLOCK), np.empty(_BLOCK), np.empty(_BLOCK)
+    means, squares, powers = np.empty((2, _BLOCK)), np.empty((3, _BLOCK)), np.empty((3, _BLOCK))
+    out[:] = 0.0
+    costly = False
+    for k in range(trades):
+        costly = costly or trading.spread[k] != 0.0 or trading.unit[k] != 0.0 or trading.ticket[k] != 0.0
+
+    now = both[0]
+    last = trades - 1
+    n = lattice.pad_high[last] - lattice.pad_low[last] + 1
+    _fill_known(now, lattice, last, trading, slope, underlying, cell, part, scratch)
+    lookup(mark_slope, underlying, trading.look[last], now[LOG_X, :n], cell, part, now[GROSS, :n], scratch[:n])
+    lookup(mark_strike, underlying, trading.look[last], now[LOG_X, :n], cell, part, now[NET, :n], scratch[:n])
+    for i in range(n):
+        now[GROSS, i] = now[GROSS, i] * now[X, i] - now[NET, i]
+
+    for k in range(trades - 2, -1, -1):
+        after, now = both[(k + trades) % 2], both[(k + trades + 1) % 2]
+        kinks = _settle_state(after, lattice, k + 1, strikes, payoff.line, node_line)
+        lines = payoff.line[strikes.line[k + 1] : strikes.line[k + 1] + kinks + 1]
+        theta = strikes.theta[strikes.first[k + 1] : strikes.first[k + 1] + kinks]
+        _fill_known(now, lattice, k, trading, slope, underlying, cell, part, scratch)
+        kind = steps.kind[k]
+        first, reached = steps.first[kind], steps.last[kind] - steps.first[kind] + 1
+        density = steps.density[kind]
+        ticket = trading.ticket[k + 1]
+        begin = steps.start[k] + BEHIND + 1
+        stencil_gain, stencil_inner = steps.gain[begin - BEHIND :], steps.inner[begin - BEHIND :]
+        expected_gain = 0.0
+        for o in range(reached):
+            expected_gain = fma(density[o], steps.gain[begin + o], expected_gain)
+        offset = lattice.low[k] - lattice.pad_low[k]
+        for block in range(lattice.low[k], lattice.high[k] + 1, _BLOCK):
+            nb = min(_BLOCK, lattice.high[k] + 1 - block)
+            own = block - lattice.pad_low[k]
+            base = block + first - lattice.pad_low[k + 1]
+            for i in range(nb):
+                held[i] = now[HEDGE, own + i]
+                held_x[i] = held[i] * now[X, own + i]
+            means[:] = 0.0
+            squares[:] = 0.0
+            powers[:] = 0.0
+            for o in range(reached):
+                a, b = base + o, base + o + nb
+                _accumulate_means(
+                    density[o], after[PAID, a:b], after[COSTS, a:b], after[UNIT_COST, a:b], after[NET, a:b],
+                    held[:nb], trading.smallest, ticket, means[0], means[1],
+                )  # fmt: skip
+            for i in range(nb):
+                means[0, i] = fma(held_x[i], expected_gain, means[0, i])
+            found = 0
+            if costly or kinks > 0:
+                for i in range(nb):
+                    found = find_breaks(
+                        breaks, found, i, held[i], base + i, reached - 1, after, node_line, lines, theta, kinks,
+                        trading.smallest, ticket, costly, steps.edges[kind],
+                    )  # fmt: skip
+            if found > 0:
+                correct_means(
+                    breaks, found, after, lines, kinks, held, held_x, stencil_gain, base, ticket, means
+                )  # fmt: skip
+            for o in range(reached):
+                a, b = base + o, base + o + nb
+                _deviations(
+                    steps.gain[begin + o], after[PAID, a:b], after[COSTS, a:b], after[UNIT_COST, a:b],
+                    after[NET, a:b], held[:nb], held_x, trading.smallest, ticket, means[0], means[1], d_gross,
+                    d_costs,
+                )  # fmt: skip
+                _accumulate_squares(density[o], d_gross[:nb], d_gross, squares[0])
+                _accumulate_squares(density[o], d_gross[:nb], d_costs, squares[1])
+                _accumulate_squares(density[o], d_costs[:nb], d_costs, squares[2])
+                _accumulate_powers(
+                    density[o], steps.inner[begin + o], held_x[:nb], after[SECOND, a:b], after[THIRD, a:b],
+                    after[FOURTH, a:b], d_gross, d_costs, powers, deviation, spread,
+                )  # fmt: skip
+                for i in range(nb):
+                    squares[0, i] = fma(density[o] * steps.inner[begin + o], held_x[i] * held_x[i], squares[0, i])
+            if found > 0:
+                correct_powers(breaks, found, after, held_x, stencil_inner, base, means, squares, powers)
+            for i in range(nb):
+                now[GROSS, own + i] = means[0, i]
+                now[COSTS, own + i] = means[1, i]
+                now[SECOND, own + i] = powers[0, i]
+                now[THIRD, own + i] = powers[1, i]
+                now[FOURTH, own + i] = powers[2, i]
+                share = 1.0
+                if k > 0:
+                    z = ((block + i) * lattice.spacing - lattice.mean[k]) / lattice.sd[k]
+                    share = math.exp(-0.5 * z * z) / (lattice.sd[k] * math.sqrt(2.0 * math.pi)) * lattice.spacing
+                for row in range(3):
+                    out[5 + row] = fma(share, squares[row, i], out[5 + row])
+        _extend(
+            now, offset, lattice.high[k] - lattice.pad_low[k], lattice.pad_high[k] - lattice.pad_low[k] + 1
+        )  # fmt: skip
+
+    start = lattice.low[0] - lattice.pad_low[0]
+    entry = abs(now[HEDGE, start] - trading.initial)
+    out[0] = now[GROSS, start]
+    out[1] = now[COSTS, start] - now[UNIT_COST, start] * entry
+    if entry > trading.smallest:
+        out[1] -= trading.ticket[0]
+    out[2], out[3], out[4] = now[SECOND, start], now[THIRD, start], now[FOURTH, start]
