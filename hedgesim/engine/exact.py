@@ -13,7 +13,6 @@ is refused.
 """
 
 import os
-from collections.abc import Iterable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass, field, fields
 
@@ -163,21 +162,23 @@ def exact(
     names = compiled.names
     previous: dict[int, dict[str, float]] = {}
     done: dict[int, _Done] = {}
+    floor = _Floor(inputs, compiled)
     with ThreadPoolExecutor(max_workers=threads or os.cpu_count() or 1) as pool:
         for number in range(_MOST_LEVELS):
             wanted = [s for s in range(len(names)) if s not in done]
             if not wanted:
                 break
-            for s, pieces in _pieces(pool, inputs, compiled, wanted, level(number)).items():
+            for s, pieces in _pieces(pool, inputs, compiled, wanted, number, floor).items():
                 figures = _combine(pieces, constants)
                 left = _left_out(pieces, figures)
+                _refuse(names[s], figures, left, tolerance)
                 if s in previous:
                     error = _change(figures, previous[s])
                     for name, bound in left.items():
                         error[name] += bound
+                    floor.judge(s, error, _scale(figures), tolerance)
                     if _within(figures, error, tolerance):
                         done[s] = _Done(figures, error, max(p.nodes for p in pieces), number + 1)
-                _refuse(names[s], figures, left, tolerance)
                 previous[s] = figures
     for s, name in enumerate(names):
         if s not in done:
@@ -185,31 +186,56 @@ def exact(
     return _result(names, [done[s] for s in range(len(names))])
 
 
+class _Floor:
+    """The floor's share of the figures; smooth, it stands still before the rest does and is then refined no further."""
+
+    def __init__(self, inputs: Inputs, compiled: Compiled) -> None:
+        self._inputs, self._compiled = inputs, compiled
+        self._errors: dict[int, dict[str, float]] = {}
+        self.laws: list[FloorLaw] = []
+        self.covariance: dict[tuple[int, int], float] = {}
+
+    def refine(self, pool: ThreadPoolExecutor, schedules: list[int], number: int) -> None:
+        """Work off the next level for those schedules, unless all of them stand still."""
+        if all(s in self._errors for s in schedules):
+            return
+        underlyings = range(len(self._inputs.market.names))
+        self.laws = list(pool.map(lambda u: floor_law(self._inputs, u, level(number)), underlyings))
+        pairs = [(s, u) for s in schedules for u in underlyings]
+        at = self._compiled.trades_at
+        found = pool.map(lambda p: covariance_with_floor(self._inputs, p[1], at[p[0]], self.laws[p[1]]), pairs)
+        self.covariance |= dict(zip(pairs, found, strict=True))
+
+    def judge(self, schedule: int, error: dict[str, float], scale: float, tolerance: float) -> None:
+        """Note that a schedule's floor stands still, a tenth of what is allowed; later put that error back."""
+        if schedule in self._errors:
+            error |= self._errors[schedule]
+            return
+        own = {name: error[name] for name in ("mean_floor", "variance_floor", "covariance_gross_floor")}
+        allowed = 0.1 * tolerance * scale
+        squares = max(own["variance_floor"], own["covariance_gross_floor"])
+        if own["mean_floor"] <= allowed and squares <= 2.0 * allowed * scale:
+            self._errors[schedule] = own
+
+
 def _pieces(
-    pool: ThreadPoolExecutor, inputs: Inputs, compiled: Compiled, schedules: Iterable[int], at: Level
+    pool: ThreadPoolExecutor, inputs: Inputs, compiled: Compiled, schedules: list[int], number: int, floor: _Floor
 ) -> dict[int, list[_Piece]]:
     """Every underlying under each of the schedules on one level of refinement, the most frequent schedules first."""
     underlyings = range(len(inputs.market.names))
-    floors = [pool.submit(floor_law, inputs, u, at) for u in underlyings]
     order = sorted(schedules, key=lambda s: -int(compiled.trades_at[s].sum()))
     flying = {
-        (s, u): pool.submit(_moments, inputs, u, compiled.trades_at[s], at, compiled.names[s])
+        (s, u): pool.submit(_moments, inputs, u, compiled.trades_at[s], level(number), compiled.names[s])
         for s in order
         for u in underlyings
     }
-    laws = [f.result() for f in floors]
-    covariances = {
-        (s, u): pool.submit(covariance_with_floor, inputs, u, compiled.trades_at[s], laws[u])
-        for s in order
-        for u in underlyings
-    }
+    floor.refine(pool, order, number)
     pieces: dict[int, list[_Piece]] = {}
     for s in order:
         pieces[s] = []
         for u in underlyings:
             moments, nodes, left_third, left_fourth = flying[s, u].result()
-            gross_floor = covariances[s, u].result()
-            pieces[s].append(_Piece(moments, gross_floor, laws[u], nodes, left_third, left_fourth))
+            pieces[s].append(_Piece(moments, floor.covariance[s, u], floor.laws[u], nodes, left_third, left_fourth))
     return pieces
 
 
@@ -298,8 +324,12 @@ def _refuse(name: str, figures: dict[str, float], left: dict[str, float], tolera
             )
 
 
+def _scale(figures: dict[str, float]) -> float:
+    return float(np.sqrt(max(figures["variance"], figures["variance_gross"], 0.0)))
+
+
 def _within(figures: dict[str, float], error: dict[str, float], tolerance: float) -> bool:
-    scale = float(np.sqrt(max(figures["variance"], figures["variance_gross"], 0.0)))
+    scale = _scale(figures)
     shape = _derived(figures)
     for name, change in error.items():
         if name in ("third", "fourth"):

@@ -48,7 +48,9 @@ def floor_law(inputs: Inputs, underlying: int, at: Level) -> FloorLaw:
         return FloorLaw(0.0, 0.0, 0.0)
     lattice, kind, first, last, density, _ = lay_lattice(inputs, underlying, looks, at, "the floor")
     nothing = np.zeros(0)
-    steps = Steps(kind, first, last, density, np.zeros((0, 0, 0, 0)), np.zeros(0, np.int64), nothing, nothing)
+    steps = Steps(
+        kind, first, last, density, np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0)), np.zeros(0, np.int64), nothing, nothing
+    )
     width = int((lattice.high - lattice.low).max()) + 1
     slopes, shocks = np.zeros((grid.looks, width)), np.zeros((grid.looks, width))
     loads, moments = np.zeros((grid.looks + 1, width)), np.empty(2)

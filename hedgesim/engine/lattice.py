@@ -157,7 +157,7 @@ def lay_schedule(inputs: Inputs, underlying: int, trades_at: Flags, at: Level, n
     left_fourth = float((left[1] * largest**4 * np.exp(4 * log_x + 8.0 * variance)).sum())
     return Walk(
         lattice=lattice,
-        steps=Steps(kind, first, last, density, edges, start, gain, inner),
+        steps=Steps(kind, first, last, density, edges, _unit_edges(), start, gain, inner),
         trading=trading,
         strikes=strikes,
         break_room=2 * int(strikes.size.max()) + density.shape[1] + 2,
@@ -262,6 +262,11 @@ def taylor_at(theta: Floats) -> tuple[Floats, Ints]:
     return -(_lagrange(theta) @ (bernoulli / (order + 1))[..., None])[..., 0], order - BEHIND
 
 
+@cache
+def _unit_edges() -> Floats:
+    return taylor_at((np.arange(EDGE_BINS + 3) - 1) / EDGE_BINS)[0][None]
+
+
 def straight_lines(payoff: Payoff, underlying: int, look: int, lattice: Lattice) -> tuple[Ints, Floats, Floats]:
     """Strikes that settle at a look as cells and positions in them, ascending, and the lines between them."""
     first, size = int(payoff.first[underlying, look]), int(payoff.size[underlying, look])
@@ -307,13 +312,30 @@ def _gains(
         drift = inputs.log_drift[underlying, here] - inputs.log_drift[underlying, looks[k]]
         variance = inputs.variance[underlying, here] - inputs.variance[underlying, looks[k]]
         share = (variance / variance[-1])[1:-1]
-        spread = variance[-1] * np.minimum.outer(share, share) * (1.0 - np.maximum.outer(share, share))
-        within = change * np.exp(drift[1:-1] + np.outer(distance - drift[-1], share) + 0.5 * np.diagonal(spread))
+        widest = variance[-1] * share * (1.0 - share)
+        within = change * np.exp(drift[1:-1] + np.outer(distance - drift[-1], share) + 0.5 * widest)
         gain[part] = weight[-1] * np.exp(distance) - weight[0] - within.sum(axis=1)
-        inner[part] = ((within @ np.expm1(spread)) * within).sum(axis=1)
+        inner[part] = _bridge_variance(within, share, float(variance[-1]))
         usual = np.abs(distance - drift[-1]) < 4.0 * np.sqrt(variance[-1])
         largest = float(inner[part][usual].max())
         # Third cumulant of a sum of lognormals to leading order: at most 3 v^2 sd / sqrt(v), v its variance.
-        third[k] = 3.0 * largest**1.5 * float(np.sqrt(spread.max()))
-        fourth[k] = 16.0 * largest**2 * float(spread.max())
+        third[k] = 3.0 * largest**1.5 * float(np.sqrt(widest.max()))
+        fourth[k] = 16.0 * largest**2 * float(widest.max())
     return start, gain, inner, (third, fourth)
+
+
+def _bridge_variance(mean: Floats, share: Floats, variance: float) -> Floats:
+    """Variance of sums of lognormals along a Brownian bridge; `mean` (case, look) their signed means.
+
+    Cov(X_l, X_m) = mean_l mean_m (exp(variance share_l (1 - share_m)) - 1) for l <= m; the exponential series makes the
+    double sum a few running sums.
+    """
+    total = np.zeros(len(mean))
+    factor, power = 1.0, 0
+    while power == 0 or factor * 0.25**power > 1e-17 * variance:
+        power += 1
+        factor *= variance / power
+        rising, falling = mean * share**power, mean * (1.0 - share) ** power
+        before = np.cumsum(rising, axis=1) - rising
+        total += factor * ((2.0 * before + rising) * falling).sum(axis=1)
+    return total

@@ -22,9 +22,10 @@ BEHIND = 2  # nodes of the stencil before the cell of the break
 EDGE_BINS = 64  # bins of theta in a table of edge weights; one more node at either end for cubic interpolation
 
 # Rows of the state at a trading look, by lattice node: price, hedge after the trade, cost of a unit, expected gross and
-# costs from here on, central moments of their sum; then gross with what settles here, hedge less what is delivered.
-X, HEDGE, UNIT_COST, GROSS, COSTS, SECOND, THIRD, FOURTH, PAID, NET, LOG_X = range(11)
-STATE_ROWS = 11
+# costs from here on, central moments of their sum; mean squares and product of gross and costs in the step from here;
+# then gross with what settles here, and hedge less what is delivered.
+X, HEDGE, UNIT_COST, GROSS, COSTS, SECOND, THIRD, FOURTH, SQUARES, PAID, NET, LOG_X = (*range(9), 11, 12, 13)
+STATE_ROWS = 14
 
 
 @kernel
@@ -288,6 +289,91 @@ def find_breaks(
 
 
 @device
+def find_turns(
+    breaks: Breaks, state: Floats, held: Floats, sources: int, base: int, cells: int, edges: Floats, means: Floats
+) -> int:
+    """Breaks of steps on which nothing settles and tickets are free: where the trade changes sign, and no others.
+
+    Takes the trapezoid error off the mean costs at once, and keeps the cost of the trade in `breaks.costs[:, 0]`, with
+    the sign it has beyond the break. Sources, base, cells as for `find_breaks`.
+    """
+    hedge, unit_cost = state[HEDGE], state[UNIT_COST]
+    found = 0
+    for i in range(sources):
+        h, m = held[i], base + i
+        above = hedge[m] > h
+        for c in range(cells):
+            m += 1
+            now_above = hedge[m] > h
+            if now_above == above:
+                continue
+            above = now_above
+            # Cubic through the four nodes about the cell, by Newton from the straight line.
+            f0, f1, f2, f3 = hedge[m - 2] - h, hedge[m - 1] - h, hedge[m] - h, hedge[m + 1] - h
+            third = (f3 - 3.0 * f2 + 3.0 * f1 - f0) / 6.0
+            second = 0.5 * (f2 - 2.0 * f1 + f0)
+            first = f2 - f1 - second - third
+            u = f1 / (f1 - f2)
+            for _ in range(3):
+                value = f1 + u * (first + u * (second + u * third))
+                rise = first + u * (2.0 * second + 3.0 * u * third)
+                if rise != 0.0:
+                    u = min(max(u - value / rise, 0.0), 1.0)
+            place = u * EDGE_BINS
+            b = min(int(place), EDGE_BINS - 1)
+            v = place - b
+            w0, w1 = -v * (v - 1.0) * (v - 2.0) / 6.0, (v + 1.0) * (v - 1.0) * (v - 2.0) / 2.0
+            w2, w3 = -(v + 1.0) * v * (v - 2.0) / 2.0, (v + 1.0) * v * (v - 1.0) / 6.0
+            sign = 1.0 if now_above else -1.0
+            miss = 0.0
+            for s in range(STENCIL):
+                k = m - 1 - BEHIND + s
+                inner = w1 * edges[c, b + 1, s] + w2 * edges[c, b + 2, s]
+                weight = w0 * edges[c, b, s] + inner + w3 * edges[c, b + 3, s]
+                cost = unit_cost[k] * sign * (hedge[k] - h)
+                breaks.weights[found, s] = weight
+                breaks.costs[found, 0, s] = cost
+                miss += weight * cost
+            means[1, i] += 2.0 * miss
+            breaks.source[found], breaks.node[found] = i, m - 1
+            found += 1
+    return found
+
+
+@device
+def correct_turns(
+    breaks: Breaks, found: int, state: Floats, held_x: Floats, gain: Floats, inner: Floats, base: int, means: Floats,
+    squares: Floats, powers: Floats,
+) -> None:  # fmt: skip
+    """Take the errors at the breaks of `find_turns` off squares and moments; arguments as for `correct_powers`.
+
+    A cost q that is added before the break and taken off beyond it changes a power of the deviation t by its odd terms.
+    """
+    for b in range(found):
+        i, first = breaks.source[b], breaks.node[b] - BEHIND
+        shift = breaks.node[b] - base - i
+        gross_mean, costs_mean, hx = means[0, i], means[1, i], held_x[i]
+        cross, square, p2, p3, p4 = 0.0, 0.0, 0.0, 0.0, 0.0
+        for s in range(STENCIL):
+            m = first + s
+            q = breaks.costs[b, 0, s]
+            wq = breaks.weights[b, s] * q
+            dg, dc = hx * gain[shift + s] + state[GROSS, m] - gross_mean, state[COSTS, m] - costs_mean
+            second = state[SECOND, m] + hx * hx * inner[shift + s]
+            t = dg + dc
+            cross += wq * dg
+            square += wq * dc
+            p2 += wq * t
+            p3 += wq * (q * q + 3.0 * (t * t + second))
+            p4 += wq * (t * (t * t + q * q + 3.0 * second) + state[THIRD, m])
+        squares[1, i] += 2.0 * cross
+        squares[2, i] += 4.0 * square
+        powers[0, i] += 4.0 * p2
+        powers[1, i] += 2.0 * p3
+        powers[2, i] += 8.0 * p4
+
+
+@device
 def correct_means(
     breaks: Breaks, found: int, state: Floats, lines: Floats, strikes: int, held: Floats, held_x: Floats,
     gain: Floats, base: int, ticket: float, means: Floats,
@@ -338,3 +424,107 @@ def correct_powers(
                 powers[0, i] += weight * t * t
                 powers[1, i] += weight * t * (t * t + 3.0 * second)
                 powers[2, i] += weight * t * (t * (t * t + 6.0 * second) + 4.0 * state[THIRD, m])
+
+
+@device
+def find_folds(
+    hedge: Floats, low: int, high: int, net: Floats, smallest: float, ticket: float, cells: Ints, theta: Floats
+) -> int:  # fmt: skip
+    """Where the expected costs of the step from a trade are not smooth in the log price at the trade.
+
+    They are smooth wherever the next hedge varies with the next price. They bend where the hedge passes a level at
+    which the next one stays (none after the unwinding, all or nothing delivered); and ticket charges jump where the
+    hedge itself settles to within `smallest` of a level.
+
+    Parameters
+    ----------
+    hedge : at the nodes; those from `low` to `high` count
+    net : the next hedge, less what is delivered, at its nodes
+    cells, theta : overwritten with the folds; at most len(cells)
+    """
+    count = 0
+    flat = 1e3 * smallest
+    levels = np.empty(len(cells))
+    found, m = 0, 0
+    while m < len(net) - 1:
+        begin = m
+        while m < len(net) - 1 and abs(net[m + 1] - net[m]) <= flat:
+            m += 1
+        if m == begin:
+            m += 1
+            continue
+        level = net[(begin + m) // 2]
+        fresh = found < len(levels)
+        for q in range(found):
+            fresh = fresh and abs(levels[q] - level) > flat
+        if not fresh:
+            continue
+        levels[found] = level
+        found += 1
+        for n in range(low, high):
+            a, b = hedge[n] - level, hedge[n + 1] - level
+            if (a > 0.0) != (b > 0.0) and abs(a) + abs(b) > flat and low < n < high - 1 and count < len(cells):
+                cells[count], theta[count] = n, _root(hedge, n, level, 0.0, 1.0, a, b)
+                count += 1
+    if ticket == 0.0:
+        return count
+    m = low
+    while m < high:
+        begin = m
+        while m < high and abs(hedge[m + 1] - hedge[m]) <= 1e-3 * smallest:
+            m += 1
+        if m == begin:
+            m += 1
+            continue
+        level = hedge[(begin + m) // 2]
+        for side in range(2):
+            node = begin if side == 0 else m
+            step = -1 if side == 0 else 1
+            while low < node < high and abs(hedge[node] - level) <= smallest:
+                node += step
+            if low < node < high and abs(hedge[node - step] - level) <= smallest and count < len(cells):
+                outer = math.log(abs(hedge[node] - level) / smallest)
+                inner = math.log(max(abs(hedge[node - step] - level), 1e-9 * smallest) / smallest)
+                away = outer / (outer - inner)
+                cells[count] = node if side == 0 else node - 1
+                theta[count] = away if side == 0 else 1.0 - away
+                count += 1
+    return count
+
+
+@device
+def mend(values: Floats, low: int, high: int, m: int, theta: float, weights: Floats) -> None:
+    """Change node values about a fold at m + theta so that plain sums over them miss nothing there.
+
+    The jump of value, slope and curvature comes from cubics through four nodes on either side; `weights` are the edge
+    weights of unit spacing.
+    """
+    if m - 3 < low or m + 4 > high:
+        return
+    jump, slope, bend = 0.0, 0.0, 0.0
+    coarse_jump, coarse_slope = 0.0, 0.0
+    for side in range(2):
+        # From the fold outwards, so that leaving out the last node leaves a parabola.
+        first, step = (m, -1) if side == 0 else (m + 1, 1)
+        f0, f1, f2, f3 = values[first], values[first + step], values[first + 2 * step], values[first + 3 * step]
+        d1, d2, d3 = f1 - f0, f2 - 2.0 * f1 + f0, f3 - 3.0 * f2 + 3.0 * f1 - f0
+        u = -theta if side == 0 else theta - 1.0
+        sign = -1.0 if side == 0 else 1.0
+        parabola, incline = f0 + u * d1 + u * (u - 1.0) / 2.0 * d2, d1 + (u - 0.5) * d2
+        coarse_jump += sign * parabola
+        coarse_slope += sign * step * incline
+        jump += sign * (parabola + u * (u - 1.0) * (u - 2.0) / 6.0 * d3)
+        slope += sign * step * (incline + (3.0 * u * u - 6.0 * u + 2.0) / 6.0 * d3)
+        bend += sign * (d2 + (u - 1.0) * d3)
+    # A fold that two fits see differently is not sharp at this spacing, and the sum needs no mending.
+    if abs(jump - coarse_jump) > 0.25 * abs(jump) and abs(slope - coarse_slope) > 0.25 * abs(slope):
+        return
+    for k in range(STENCIL):
+        away = k - BEHIND - theta
+        values[m - BEHIND + k] -= weights[k] * (jump + away * (slope + 0.5 * away * bend))
+
+
+@device
+def unit_edge(unit: Floats, theta: float, weights: Floats) -> None:
+    """Edge weights of unit spacing from their table, (1, bin, STENCIL)."""
+    _edge(unit, 0, theta, weights)

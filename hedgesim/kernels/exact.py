@@ -25,6 +25,7 @@ from hedgesim.kernels.breaks import (
     NET,
     PAID,
     SECOND,
+    SQUARES,
     STATE_ROWS,
     STENCIL,
     THIRD,
@@ -33,7 +34,12 @@ from hedgesim.kernels.breaks import (
     X,
     correct_means,
     correct_powers,
+    correct_turns,
     find_breaks,
+    find_folds,
+    find_turns,
+    mend,
+    unit_edge,
 )
 from hedgesim.kernels.jit import device, kernel
 from hedgesim.kernels.simulate import Payoff
@@ -44,6 +50,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 _BLOCK = 128
+_MOST_FOLDS = 256
 
 # Results of `run_schedule`.
 MOMENT_ROWS = ("gross", "costs", "second", "third", "fourth", "gross_gross", "gross_costs", "costs_costs")
@@ -75,6 +82,7 @@ class Steps(NamedTuple):
     first, last : (kind,) offsets, in nodes, that a step can reach
     density : (kind, offset) lattice weights of the step from offset `first` on
     edges : (kind, cell, bin, STENCIL) see `edge_weights`; empty when no integrand breaks
+    unit : (1, bin, STENCIL) edge weights of a plain sum, see `breaks.mend`
     start : first entry of `gain` and `inner`, which begin BEHIND + 1 nodes before offset `first`
     gain : expected discounted gain of one hedge unit over X_k, given both ends of the step, by offset
     inner : variance of the same, given both ends
@@ -85,6 +93,7 @@ class Steps(NamedTuple):
     last: Ints
     density: Floats
     edges: Floats
+    unit: Floats
     start: Ints
     gain: Floats
     inner: Floats
@@ -291,6 +300,8 @@ def run_schedule(
     )
     held, held_x = np.empty(_BLOCK), np.empty(_BLOCK)
     d_gross, d_costs, deviation, spread = np.empty(_BLOCK), np.empty(_BLOCK), np.empty(_BLOCK), np.empty(_BLOCK)
+    fold_cell, fold_theta = np.empty(_MOST_FOLDS, dtype=np.int64), np.empty(_MOST_FOLDS)
+    fold_weights = np.empty(STENCIL)
     means, squares, powers = np.empty((2, _BLOCK)), np.empty((3, _BLOCK)), np.empty((3, _BLOCK))
     out[:] = 0.0
     costly = False
@@ -317,6 +328,7 @@ def run_schedule(
         density = steps.density[kind]
         ticket = trading.ticket[k + 1]
         begin = steps.start[k] + BEHIND + 1
+        turning = costly and kinks == 0 and ticket == 0.0
         stencil_gain, stencil_inner = steps.gain[begin - BEHIND :], steps.inner[begin - BEHIND :]
         expected_gain = 0.0
         for o in range(reached):
@@ -341,13 +353,14 @@ def run_schedule(
             for i in range(nb):
                 means[0, i] = fma(held_x[i], expected_gain, means[0, i])
             found = 0
-            if costly or kinks > 0:
+            if turning:
+                found = find_turns(breaks, after, held, nb, base, reached - 1, steps.edges[kind], means)
+            elif costly or kinks > 0:
                 for i in range(nb):
                     found = find_breaks(
                         breaks, found, i, held[i], base + i, reached - 1, after, node_line, lines, theta, kinks,
                         trading.smallest, ticket, costly, steps.edges[kind],
                     )  # fmt: skip
-            if found > 0:
                 correct_means(
                     breaks, found, after, lines, kinks, held, held_x, stencil_gain, base, ticket, means
                 )  # fmt: skip
@@ -367,7 +380,11 @@ def run_schedule(
                 )  # fmt: skip
                 for i in range(nb):
                     squares[0, i] = fma(density[o] * steps.inner[begin + o], held_x[i] * held_x[i], squares[0, i])
-            if found > 0:
+            if turning:
+                correct_turns(
+                    breaks, found, after, held_x, stencil_gain, stencil_inner, base, means, squares, powers
+                )  # fmt: skip
+            elif found > 0:
                 correct_powers(breaks, found, after, held_x, stencil_inner, base, means, squares, powers)
             for i in range(nb):
                 now[GROSS, own + i] = means[0, i]
@@ -375,12 +392,32 @@ def run_schedule(
                 now[SECOND, own + i] = powers[0, i]
                 now[THIRD, own + i] = powers[1, i]
                 now[FOURTH, own + i] = powers[2, i]
-                share = 1.0
-                if k > 0:
-                    z = ((block + i) * lattice.spacing - lattice.mean[k]) / lattice.sd[k]
-                    share = math.exp(-0.5 * z * z) / (lattice.sd[k] * math.sqrt(2.0 * math.pi)) * lattice.spacing
                 for row in range(3):
-                    out[5 + row] = fma(share, squares[row, i], out[5 + row])
+                    now[SQUARES + row, own + i] = squares[row, i]
+        end = lattice.high[k] - lattice.pad_low[k]
+        if costly:
+            reachable = lattice.pad_high[k + 1] - lattice.pad_low[k + 1] + 1
+            folds = find_folds(
+                now[HEDGE], offset, end, after[NET, :reachable], trading.smallest, ticket, fold_cell, fold_theta
+            )
+            # Gross P&L has no folds: what costs add to the variance is mended alone, so that the fit cannot harm the
+            # rest. Third and fourth moments stay as they are.
+            if folds > 0:
+                for i in range(offset, end + 1):
+                    now[SECOND, i] -= 2.0 * now[SQUARES + 1, i] + now[SQUARES + 2, i]
+                for f in range(folds):
+                    unit_edge(steps.unit, fold_theta[f], fold_weights)
+                    for row in (COSTS, SQUARES + 1, SQUARES + 2):
+                        mend(now[row], offset, end, fold_cell[f], fold_theta[f], fold_weights)
+                for i in range(offset, end + 1):
+                    now[SECOND, i] += 2.0 * now[SQUARES + 1, i] + now[SQUARES + 2, i]
+        for i in range(offset, end + 1):
+            share = 1.0
+            if k > 0:
+                z = ((lattice.pad_low[k] + i) * lattice.spacing - lattice.mean[k]) / lattice.sd[k]
+                share = math.exp(-0.5 * z * z) / (lattice.sd[k] * math.sqrt(2.0 * math.pi)) * lattice.spacing
+            for row in range(3):
+                out[5 + row] = fma(share, now[SQUARES + row, i], out[5 + row])
         _extend(
             now, offset, lattice.high[k] - lattice.pad_low[k], lattice.pad_high[k] - lattice.pad_low[k] + 1
         )  # fmt: skip
