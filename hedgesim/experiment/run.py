@@ -261,7 +261,7 @@ def _write(result: Result, fresh: Path, folder: Path, *, hashes: dict[str, str],
     )
     write_report(result.study, _facts(result, hashes), fresh, created=created)
     if ledger:
-        _write_ledger(result.ledger, fresh)
+        _write_ledger(result.ledger, result.study.schedules, fresh)
     seconds = result.seconds | {"report": time.monotonic() - start}
     found = {
         "title": result.loaded.experiment.title,
@@ -278,18 +278,19 @@ def _write(result: Result, fresh: Path, folder: Path, *, hashes: dict[str, str],
     (fresh / FINDINGS).write_text(text + "\n", encoding="utf-8")
 
 
-def _write_ledger(ledger: Ledger, folder: Path) -> None:
-    """Every component of every path: ledger.parquet where pyarrow is installed, ledger.npz otherwise."""
-    detail, trades, turnover = ledger.detail, ledger.trades_detail, ledger.turnover_detail
-    if detail is None or trades is None or turnover is None:
+def _write_ledger(ledger: Ledger, shown: tuple[str, ...], folder: Path) -> None:
+    """Components of every path under the `shown` schedules: ledger.parquet with pyarrow, ledger.npz without."""
+    if ledger.detail is None or ledger.trades_detail is None or ledger.turnover_detail is None:
         return
+    rows = [ledger.schedules.index(name) for name in shown]
+    detail = ledger.detail[rows]
     schedules, underlyings, _, paths = detail.shape
     columns: dict[str, Any] = {
-        "schedule": np.repeat(np.array(ledger.schedules), paths),
+        "schedule": np.repeat(np.array(shown), paths),
         "path": np.tile(np.arange(paths), schedules),
-        "total": ledger.totals.reshape(-1),
-        "trades": trades.reshape(-1),
-        "turnover": turnover.reshape(-1),
+        "total": ledger.totals[rows].reshape(-1),
+        "trades": ledger.trades_detail[rows].reshape(-1),
+        "turnover": ledger.turnover_detail[rows].reshape(-1),
     }
     for c, name in enumerate(ledger.components):
         columns[name] = detail[:, :, c].sum(axis=1).reshape(-1)
@@ -303,7 +304,7 @@ def _write_ledger(ledger: Ledger, folder: Path) -> None:
         np.savez_compressed(folder / "ledger.npz", **columns)
         return
     columns["schedule"] = pa.DictionaryArray.from_arrays(
-        pa.array(np.repeat(np.arange(schedules), paths).astype(np.int32)), pa.array(ledger.schedules)
+        pa.array(np.repeat(np.arange(schedules), paths).astype(np.int32)), pa.array(shown)
     )
     pq.write_table(pa.table(columns), folder / "ledger.parquet", compression="zstd")
 
