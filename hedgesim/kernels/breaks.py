@@ -85,7 +85,7 @@ def edge_weights(spacing: float, mean: float, sd: float, first: int, taylor: Flo
 
 
 @device
-def _edge(edges: Floats, cell: int, theta: float, weights: Floats) -> None:
+def edge_at(edges: Floats, cell: int, theta: float, weights: Floats) -> None:
     """Edge weights of a break, by cubic interpolation in theta."""
     place = theta * EDGE_BINS
     b = min(int(place), EDGE_BINS - 1)
@@ -111,7 +111,7 @@ def _between(node: Floats, m: int, u: float) -> float:
 
 
 @device
-def _root(node: Floats, m: int, level: float, a: float, b: float, fa: float, fb: float) -> float:
+def root_in_cell(node: Floats, m: int, level: float, a: float, b: float, fa: float, fb: float) -> float:
     """Position in [a, b] of the cell where the interpolated node values pass `level`; fa and fb differ in sign."""
     enough = 1e-12 * abs(fb - fa)
     u, kept = a, 0
@@ -177,7 +177,7 @@ def _add_break(
         breaks.line[count, side] = line[side]
         breaks.sign[count, side] = sign[side]
         breaks.active[count, side] = active[side]
-    _edge(edges, cell, theta, breaks.weights[count])
+    edge_at(edges, cell, theta, breaks.weights[count])
     return count + 1
 
 
@@ -203,7 +203,7 @@ def _segment(
     active_a, active_b = abs(ua) > smallest, abs(ub) > smallest
     if active_a and active_b:
         if (ua > 0.0) != (ub > 0.0):
-            theta = _root(hedge, node, level, a, b, ua, ub)
+            theta = root_in_cell(hedge, node, level, a, b, ua, ub)
             sign = 1.0 if ub > 0.0 else -1.0
             return _add_break(breaks, count, source, node, (line, line), (-sign, sign), (1.0, 1.0), edges, cell, theta)
     elif active_a != active_b and ticket != 0.0:
@@ -424,107 +424,3 @@ def correct_powers(
                 powers[0, i] += weight * t * t
                 powers[1, i] += weight * t * (t * t + 3.0 * second)
                 powers[2, i] += weight * t * (t * (t * t + 6.0 * second) + 4.0 * state[THIRD, m])
-
-
-@device
-def find_folds(
-    hedge: Floats, low: int, high: int, net: Floats, smallest: float, ticket: float, cells: Ints, theta: Floats
-) -> int:  # fmt: skip
-    """Where the expected costs of the step from a trade are not smooth in the log price at the trade.
-
-    They are smooth wherever the next hedge varies with the next price. They bend where the hedge passes a level at
-    which the next one stays (none after the unwinding, all or nothing delivered); and ticket charges jump where the
-    hedge itself settles to within `smallest` of a level.
-
-    Parameters
-    ----------
-    hedge : at the nodes; those from `low` to `high` count
-    net : the next hedge, less what is delivered, at its nodes
-    cells, theta : overwritten with the folds; at most len(cells)
-    """
-    count = 0
-    flat = 1e3 * smallest
-    levels = np.empty(len(cells))
-    found, m = 0, 0
-    while m < len(net) - 1:
-        begin = m
-        while m < len(net) - 1 and abs(net[m + 1] - net[m]) <= flat:
-            m += 1
-        if m == begin:
-            m += 1
-            continue
-        level = net[(begin + m) // 2]
-        fresh = found < len(levels)
-        for q in range(found):
-            fresh = fresh and abs(levels[q] - level) > flat
-        if not fresh:
-            continue
-        levels[found] = level
-        found += 1
-        for n in range(low, high):
-            a, b = hedge[n] - level, hedge[n + 1] - level
-            if (a > 0.0) != (b > 0.0) and abs(a) + abs(b) > flat and low < n < high - 1 and count < len(cells):
-                cells[count], theta[count] = n, _root(hedge, n, level, 0.0, 1.0, a, b)
-                count += 1
-    if ticket == 0.0:
-        return count
-    m = low
-    while m < high:
-        begin = m
-        while m < high and abs(hedge[m + 1] - hedge[m]) <= 1e-3 * smallest:
-            m += 1
-        if m == begin:
-            m += 1
-            continue
-        level = hedge[(begin + m) // 2]
-        for side in range(2):
-            node = begin if side == 0 else m
-            step = -1 if side == 0 else 1
-            while low < node < high and abs(hedge[node] - level) <= smallest:
-                node += step
-            if low < node < high and abs(hedge[node - step] - level) <= smallest and count < len(cells):
-                outer = math.log(abs(hedge[node] - level) / smallest)
-                inner = math.log(max(abs(hedge[node - step] - level), 1e-9 * smallest) / smallest)
-                away = outer / (outer - inner)
-                cells[count] = node if side == 0 else node - 1
-                theta[count] = away if side == 0 else 1.0 - away
-                count += 1
-    return count
-
-
-@device
-def mend(values: Floats, low: int, high: int, m: int, theta: float, weights: Floats) -> None:
-    """Change node values about a fold at m + theta so that plain sums over them miss nothing there.
-
-    The jump of value, slope and curvature comes from cubics through four nodes on either side; `weights` are the edge
-    weights of unit spacing.
-    """
-    if m - 3 < low or m + 4 > high:
-        return
-    jump, slope, bend = 0.0, 0.0, 0.0
-    coarse_jump, coarse_slope = 0.0, 0.0
-    for side in range(2):
-        # From the fold outwards, so that leaving out the last node leaves a parabola.
-        first, step = (m, -1) if side == 0 else (m + 1, 1)
-        f0, f1, f2, f3 = values[first], values[first + step], values[first + 2 * step], values[first + 3 * step]
-        d1, d2, d3 = f1 - f0, f2 - 2.0 * f1 + f0, f3 - 3.0 * f2 + 3.0 * f1 - f0
-        u = -theta if side == 0 else theta - 1.0
-        sign = -1.0 if side == 0 else 1.0
-        parabola, incline = f0 + u * d1 + u * (u - 1.0) / 2.0 * d2, d1 + (u - 0.5) * d2
-        coarse_jump += sign * parabola
-        coarse_slope += sign * step * incline
-        jump += sign * (parabola + u * (u - 1.0) * (u - 2.0) / 6.0 * d3)
-        slope += sign * step * (incline + (3.0 * u * u - 6.0 * u + 2.0) / 6.0 * d3)
-        bend += sign * (d2 + (u - 1.0) * d3)
-    # A fold that two fits see differently is not sharp at this spacing, and the sum needs no mending.
-    if abs(jump - coarse_jump) > 0.25 * abs(jump) and abs(slope - coarse_slope) > 0.25 * abs(slope):
-        return
-    for k in range(STENCIL):
-        away = k - BEHIND - theta
-        values[m - BEHIND + k] -= weights[k] * (jump + away * (slope + 0.5 * away * bend))
-
-
-@device
-def unit_edge(unit: Floats, theta: float, weights: Floats) -> None:
-    """Edge weights of unit spacing from their table, (1, bin, STENCIL)."""
-    _edge(unit, 0, theta, weights)

@@ -35,12 +35,11 @@ from hedgesim.kernels.breaks import (
     correct_means,
     correct_powers,
     correct_turns,
+    edge_at,
     find_breaks,
-    find_folds,
     find_turns,
-    mend,
-    unit_edge,
 )
+from hedgesim.kernels.folds import find_folds, mend
 from hedgesim.kernels.jit import device, kernel
 from hedgesim.kernels.simulate import Payoff
 from hedgesim.kernels.tables import Table, lookup
@@ -82,7 +81,7 @@ class Steps(NamedTuple):
     first, last : (kind,) offsets, in nodes, that a step can reach
     density : (kind, offset) lattice weights of the step from offset `first` on
     edges : (kind, cell, bin, STENCIL) see `edge_weights`; empty when no integrand breaks
-    unit : (1, bin, STENCIL) edge weights of a plain sum, see `breaks.mend`
+    unit : (1, bin, STENCIL) edge weights of a plain sum, see `folds.mend`
     start : first entry of `gain` and `inner`, which begin BEHIND + 1 nodes before offset `first`
     gain : expected discounted gain of one hedge unit over X_k, given both ends of the step, by offset
     inner : variance of the same, given both ends
@@ -406,7 +405,7 @@ def run_schedule(
                 for i in range(offset, end + 1):
                     now[SECOND, i] -= 2.0 * now[SQUARES + 1, i] + now[SQUARES + 2, i]
                 for f in range(folds):
-                    unit_edge(steps.unit, fold_theta[f], fold_weights)
+                    edge_at(steps.unit, 0, fold_theta[f], fold_weights)
                     for row in (COSTS, SQUARES + 1, SQUARES + 2):
                         mend(now[row], offset, end, fold_cell[f], fold_theta[f], fold_weights)
                 for i in range(offset, end + 1):
