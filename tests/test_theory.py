@@ -131,14 +131,14 @@ def over_time(case, function, **options):
     total = 0.0
     for start, end in pairwise(edges):
         total += integrate.quad(
-            lambda q, a=start, e=end: 2 * q * (e - a) * function(e - (e - a) * q * q), 0, 1, **options
+            lambda q, a=start, e=end: 2 * q * (e - a) * function(e - (e - a) * q * q), 0, 1, limit=400, **options
         )[0]
     return total
 
 
 def test_granularity_of_the_worked_example():
     # Bertsimas, Kogan and Lo (2000), J. Financial Economics 55; value of their integral for Hull's option at mu = r.
-    assert np.sqrt(granularity(**given(hull()))) == pytest.approx(2.1475437619, rel=1e-9)
+    assert np.sqrt(granularity(**given(hull()))) == pytest.approx(2.1475437619, rel=1e-8)
 
 
 @pytest.mark.parametrize(("spot", "strike", "drift"), [(49.0, 50.0, 0.13), (100.0, 130.0, -0.4), (100.0, 60.0, 0.3)])
@@ -158,14 +158,16 @@ def test_granularity_of_one_option_is_the_closed_integral(spot, strike, drift):
     assert granularity(**given(case)) == pytest.approx(49 * g2, rel=1e-6)
 
 
-def test_granularity_of_a_book_against_quadrature_over_prices():
+@pytest.mark.parametrize("strikes", [(101.0, 97.0, 102.0, 98.0), (101.0, 97.0, 101.03, 96.99)])
+def test_granularity_of_a_book_against_quadrature_over_prices(strikes):
     case = as_one_name(two_names(looks=64, correlation=0.5, overlap=True))
+    case["book"] = replace(case["book"], strike=frozen(strikes), units=frozen([-100.0, 60.0, 90.0, -70.0]))
 
     def square(s):
         _, g, weight = gamma_nodes(case, s)
         return (g * g * weight).sum()
 
-    expected = 0.5 * 0.25 * 0.25**4 * over_time(case, square, epsrel=1e-9)
+    expected = 0.5 * 0.25 * 0.25**4 * over_time(case, square, epsrel=1e-7)
     assert granularity(**given(case)) == pytest.approx(expected, rel=1e-6)
 
 
@@ -250,7 +252,7 @@ def test_square_root_law_is_the_granularity_at_the_forward():
     case = hull(spot=50.0 * np.exp(vol**2 * years / 2), years=years, rate=0.0, vol=vol)
     root, reason = kamal_derman(**given(case))
     assert reason == ""
-    assert root**2 == pytest.approx(granularity(**given(case)), rel=1e-9)
+    assert root**2 == pytest.approx(granularity(**given(case)), rel=1e-7)
     vega = 50.0 * np.sqrt(years / (2 * np.pi))
     assert root == pytest.approx(np.sqrt(np.pi / 4) * vega * vol, rel=1e-12)
 
@@ -521,7 +523,7 @@ def test_a_law_misses_by_a_ratio():
     assert np.sqrt(misses(by_name["square-root law"], 20, exact)) == pytest.approx(1.04, abs=0.005)
     assert np.sqrt(misses(by_name["two-term law"], 20, exact)) == pytest.approx(1.0, abs=0.005)
     several = misses(by_name["granularity"], np.array([20, 80]), np.array([exact, 0.2351955216**2]))
-    assert several == pytest.approx(2.1475437619**2 / np.array([20 * exact, 80 * 0.2351955216**2]), rel=1e-9)
+    assert several == pytest.approx(2.1475437619**2 / np.array([20 * exact, 80 * 0.2351955216**2]), rel=1e-7)
     assert np.isnan(misses(by_name["granularity"], 20, 0.0))
     nothing = {law.name: law for law in laws(**given(hull(hedge_vol=0.25), costs=True))}["two-term law"]
     assert np.isnan(misses(nothing, np.array([20, 80]), np.array([1.0, 2.0]))).all()

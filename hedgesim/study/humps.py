@@ -30,6 +30,8 @@ _PROBES = np.array([-6.0, -4.0, -3.0, -2.0, -1.4, -0.9, -0.45, 0.0, 0.45, 0.9, 1
 _MOST_PROBES, _FEWEST_PROBES, _PROBE_WORK = 900, 200, 200_000
 _HALVINGS = 16
 _NODES_TERMINAL = 12
+# Time left at the last node beside the time that has passed: less would be lost to rounding.
+_LEAST_LEFT = 1e-14
 
 
 @dataclass(frozen=True)
@@ -256,11 +258,16 @@ class Panel:
         """How many are alive."""
         return int(np.count_nonzero(self.alive))
 
-    def nodes(self, count: int) -> tuple[Floats, Floats]:
-        """Times and weights of an integral over the panel."""
+    def nodes(self, count: int, *, power: int = 2) -> tuple[Floats, Floats]:
+        """Times and weights of an integral over the panel, s = end - (end - start) q^power.
+
+        Power 2 is best where only the inverse root is to be taken away. Power 4 looks closer at the end: strikes 0.01 %
+        apart part only in the last moments.
+        """
         q, weight = unit_rule(count)
         length = self.end - self.start
-        return self.end - length * q**2, 2.0 * length * q * weight
+        left = np.maximum(length * q**power, _LEAST_LEFT * self.end)
+        return self.end - left, power * length * q ** (power - 1) * weight
 
 
 def panels(held: Options, law: Motion) -> list[Panel]:

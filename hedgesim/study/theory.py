@@ -34,7 +34,8 @@ from hedgesim.study.humps import (
 )
 
 # Nodes a panel, fewer where books are large: short panels between many expiries need few.
-_NODES = (40, 20, 10, 6, 4)
+_NODES, _POWER = (64, 40, 24, 12, 8, 5), 4
+_NODES_SMOOTH = 40
 _NODES_ABSOLUTE = (24, 16, 8, 5, 4)
 _NODES_PAIRS = (28, 20, 14, 10)
 _WORK, _MOST_WORK = 10_000_000, 60_000_000
@@ -153,7 +154,7 @@ def granularity(*, market: Market, book: Book, grid: LookGrid, source: Gbm) -> f
     count = _affordable(_NODES, [p.size**2 for p in parts])
     for panel in parts:
         alive = held.part(panel.alive)
-        s, weight = panel.nodes(count)
+        s, weight = panel.nodes(count, power=_POWER)
         at = humps(alive, law, s)
         coefficient = _squared_correlation(alive, law)
         total += pair_sum(at, at, law, shared=s, times=weight, coefficient=coefficient, centred=False)
@@ -343,13 +344,14 @@ def continuous_hedging(*, market: Market, book: Book, grid: LookGrid, source: Gb
     parts = panels(held, law)
     mean = certain
     for panel in parts:
-        s, weight = panel.nodes(_NODES[0])
+        s, weight = panel.nodes(_NODES_SMOOTH)
         mean += float(weight @ humps(held.part(panel.alive), law, s).means() @ amount[panel.alive])
     final, final_amount = open_at_horizon(book, market, grid, law)
     mean += float(final.means()[0] @ final_amount)
     pairs = sum(a.size * b.size for k, a in enumerate(parts) for b in parts[k:])
-    if pairs * _NODES_PAIRS[-1] ** 2 > _MOST_WORK:
-        return Continuous(mean, None, f"{held.size} different options are too many for the double integral")
+    ends = len(final_amount) * (len(final_amount) + _NODES_SMOOTH * sum(panel.size for panel in parts))
+    if pairs * _NODES_PAIRS[-1] ** 2 > _MOST_WORK or ends > _MOST_WORK:
+        return Continuous(mean, None, f"{book.size} positions are too many for the double integral")
     count = next((n for n in _NODES_PAIRS if pairs * n**2 <= _WORK), _NODES_PAIRS[-1])
     variance = 0.0
     for early, late, s, later, weight in ordered_pairs(parts, count):
@@ -364,7 +366,7 @@ def continuous_hedging(*, market: Market, book: Book, grid: LookGrid, source: Gb
         )
     if len(final_amount):
         for panel in parts:
-            s, weight = panel.nodes(_NODES[0])
+            s, weight = panel.nodes(_NODES_SMOOTH)
             at_end = Humps(final.underlying, *(np.repeat(x, len(s), axis=0) for x in (final.offset, final.spread)))
             variance += 2.0 * pair_sum(
                 humps(held.part(panel.alive), law, s),
