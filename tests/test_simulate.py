@@ -94,9 +94,9 @@ def test_jackknife_errors_of_a_mean_and_a_variance_are_the_textbook_ones():
     z = (total - total.mean()) ** 2
     everything = lambda m: m.cov[0].sum()  # noqa: E731
     mean = lambda m: m.mean[0].sum()  # noqa: E731
-    # 64 groups: a standard error is known to 1 / sqrt(126), 9 %.
-    assert ledger.replicates.standard_error(mean) == pytest.approx(total.std() / n**0.5, rel=0.36)
-    assert ledger.replicates.standard_error(everything) == pytest.approx(z.std() / n**0.5, rel=0.36)
+    # 98 groups: a standard error is known to 1 / sqrt(194), 7 %.
+    assert ledger.replicates.standard_error(mean) == pytest.approx(total.std() / n**0.5, rel=0.29)
+    assert ledger.replicates.standard_error(everything) == pytest.approx(z.std() / n**0.5, rel=0.29)
 
 
 # Exact standard deviation per option, discounted, drift = rate, no costs: sum of variances of orthogonal martingale

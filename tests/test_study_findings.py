@@ -245,7 +245,7 @@ def test_sentence_on_an_unmet_limit_and_on_total_mean(two_underlyings):
 def test_cost_of_risk_in_words_gives_the_annual_hurdle(result):
     words = cost_of_risk_words(result)
     assert words.startswith("0.5 EUR of expected P&L given up for each EUR of standard deviation of P&L removed")
-    assert "0.5 = an annual return-to-risk hurdle of 1 x sqrt(years)" in words
+    assert "as an annual return-to-risk hurdle 1 (0.5 = 1 x sqrt(0.25))" in words
 
 
 def test_smallest_ledger_is_studied_without_errors():

@@ -178,7 +178,8 @@ def view_of(study: Study, ledger: Ledger) -> View:
         fitted=tuple(f.law is not None and name in f.law.points for name in names),
         asymptotic=asymptotic[order],
         risk=c.risk[order],
-        risk_se=c.risk_se[order],
+        # A standard deviation has one error on all pages: that from every path, not from groups of them.
+        risk_se=(study.distribution.std_se if study.settings.risk == "std" else c.risk_se)[order],
         risk_name=_RISK_NAMES[study.settings.risk],
         objective=c.objective[order],
         objective_se=c.objective_se[order],

@@ -43,7 +43,7 @@ def headline(study: Study) -> dict[str, Any]:
             "schedule": study.schedules[best] if choice.comparable else None,
             "mean_cost": figure(choice.mean_cost, choice.mean_cost_se, cash),
             "mean_cost_counts": "costs and funding" if study.settings.mean == "costs" else "minus the total P&L",
-            "risk": figure(choice.risk, choice.risk_se, unit),
+            "risk": figure(choice.risk, figures.std_se if study.settings.risk == "std" else choice.risk_se, unit),
             "risk_measure": study.settings.risk,
             "objective": figure(choice.objective, choice.objective_se, cash),
             "limit": _plain(study.settings.limit),
@@ -137,7 +137,8 @@ def cost_of_risk_words(study: Study) -> str:
     hurdle = annual_hurdle(settings)
     if math.isnan(hurdle):
         return words
-    return f"{words}; {settings.cost_of_risk:g} = an annual return-to-risk hurdle of {hurdle:.3g} x sqrt(years)"
+    root = f"{settings.cost_of_risk:g} = {hurdle:.3g} x sqrt({settings.years:.4g})"
+    return f"{words}; as an annual return-to-risk hurdle {hurdle:.3g} ({root})"
 
 
 def _command(schedule: str) -> str:
