@@ -1,4 +1,4 @@
-"""Folds: where expected costs are not smooth in the log price, and how plain sums over the lattice are kept right there."""
+"""Folds: where expected costs are not smooth in the log price, and plain sums over the lattice that allow for it."""
 
 import math
 
