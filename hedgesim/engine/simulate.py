@@ -14,6 +14,7 @@ import numpy as np
 from hedgesim.book import Book, exposure, premium_received
 from hedgesim.costs import CostTerms
 from hedgesim.engine.ledger import COST_COMPONENTS, Ledger, Moments, Replicates, Watch
+from hedgesim.kernels.accounts import Accounts, close_accounts
 from hedgesim.kernels.moments import comoments
 from hedgesim.kernels.replay import SMALLEST_TRADE
 from hedgesim.kernels.simulate import (
@@ -21,12 +22,10 @@ from hedgesim.kernels.simulate import (
     PATH_ROWS,
     RESIDUAL_BINS,
     TRADE_ROWS,
-    Accounts,
     BookTables,
     DayCosts,
     Diffusion,
     Hedging,
-    close_accounts,
     run_chunk,
 )
 from hedgesim.kernels.tables import TILE
@@ -44,6 +43,7 @@ COMPONENTS = (
     "remainder",
     *COST_COMPONENTS,
 )
+_BY_SCHEDULE = ("lag", *COST_COMPONENTS)
 WATCHED_PATHS = 8192
 _LARGEST_CHUNK = 4096
 _CHUNKS_WANTED = 128
@@ -301,10 +301,15 @@ def _run(setup: Setup, seed: int, begin: int, end: int, detail: bool) -> _Chunk:
     totals, trades, turnover = np.empty((schedules, n)), np.empty((schedules, n)), np.empty((schedules, n))
     mean, products = np.empty((schedules, width)), np.empty((schedules, width, width))
     columns = np.empty((width, n))
+    by_schedule = np.tile([name in _BY_SCHEDULE for name in COMPONENTS], underlyings)
+    everything = np.ones(width, dtype=bool)
     kept = np.empty((schedules, underlyings, len(COMPONENTS), n)) if detail else None
     for s in range(schedules):
         close_accounts(path_rows, trade_rows[s], setup.accounts, s, columns, totals[s], trades[s], turnover[s])
-        comoments(columns, setup.accounts.moving, mean[s], products[s])
+        if s > 0:
+            # What the path alone decides is the same under every schedule.
+            mean[s], products[s] = mean[0], products[0]
+        comoments(columns, setup.accounts.moving, by_schedule if s > 0 else everything, mean[s], products[s])
         if kept is not None:
             kept[s] = columns.reshape(kept.shape[1:])
     return _Chunk(

@@ -27,22 +27,23 @@ def _sum_products(a: Floats, b: Floats, a0: float, b0: float, lanes: Floats) -> 
 
 
 @kernel
-def comoments(columns: Floats, moving: NDArray[np.bool_], mean: Floats, out: Floats) -> None:
+def comoments(columns: Floats, moving: NDArray[np.bool_], fresh: NDArray[np.bool_], mean: Floats, out: Floats) -> None:
     """Mean (column,) and sum of centred products (column, column) of `columns` (column, path).
 
-    Columns that are not `moving` are constant: their mean is the first entry, their products zero.
+    Columns that are not `moving` are constant: their mean is the first entry, their products zero. What concerns only
+    columns that are not `fresh` stands in `mean` and `out` already, and is left as it is.
     """
     lanes = np.empty(_LANES)
     one = np.ones(columns.shape[1])
     for c in range(columns.shape[0]):
         if not moving[c]:
             mean[c] = columns[c, 0]
-            continue
-        mean[c] = _sum_products(columns[c], one, 0.0, 0.0, lanes) / columns.shape[1]
+        elif fresh[c]:
+            mean[c] = _sum_products(columns[c], one, 0.0, 0.0, lanes) / columns.shape[1]
     for c in range(columns.shape[0]):
         for d in range(c + 1):
-            if moving[c] and moving[d]:
-                out[c, d] = _sum_products(columns[c], columns[d], mean[c], mean[d], lanes)
-            else:
+            if not (moving[c] and moving[d]):
                 out[c, d] = 0.0
+            elif fresh[c] or fresh[d]:
+                out[c, d] = _sum_products(columns[c], columns[d], mean[c], mean[d], lanes)
             out[d, c] = out[c, d]
