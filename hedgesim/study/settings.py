@@ -22,6 +22,7 @@ class Settings:
     currency : code printed before amounts of money, or empty
     hidden : schedules that the engine added only for reference; they appear in no result
     equal_looks : all looks are equally long in variance years, which the asymptotic law needs
+    tolerance : of the exact engine, relative to the standard deviation of the P&L
     """
 
     mean: MeanKind
@@ -33,3 +34,4 @@ class Settings:
     currency: str = ""
     hidden: tuple[str, ...] = ()
     equal_looks: bool = True
+    tolerance: float = 1e-6

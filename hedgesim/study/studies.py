@@ -8,6 +8,7 @@ from hedgesim.schedules import Compiled
 from hedgesim.study.breakdown import Breakdown, Variances, breakdown, variances
 from hedgesim.study.choice import Choice, choose
 from hedgesim.study.distribution import Distribution, distribution
+from hedgesim.study.exactness import Exactness
 from hedgesim.study.frequency import Frequency, frequency
 from hedgesim.study.projection import visible
 from hedgesim.study.settings import Settings
@@ -31,6 +32,7 @@ class Study:
     trades, turnover : mean number of trades and mean traded notional a path
     delta_mean, delta_p99, day_std, day_worst : what the desk sees between trades, see `Watch`
     warnings : what a reader must know
+    exactness : what needs no random numbers, None for price histories
     """
 
     engine: str
@@ -50,9 +52,10 @@ class Study:
     day_std: Floats
     day_worst: Floats
     warnings: tuple[str, ...]
+    exactness: Exactness | None = None
 
 
-def study(ledger: Ledger, schedules: Compiled, settings: Settings) -> Study:
+def study(ledger: Ledger, schedules: Compiled, settings: Settings, *, exactness: Exactness | None = None) -> Study:
     """Study `ledger`.
 
     Parameters
@@ -60,6 +63,7 @@ def study(ledger: Ledger, schedules: Compiled, settings: Settings) -> Study:
     ledger : of any engine
     schedules : the time-based rules behind its schedules, matched by name; a schedule without one is not time-based
     settings : what the desk asks
+    exactness : of the same ledger and schedules, where there is one
 
     Raises
     ------
@@ -97,4 +101,5 @@ def study(ledger: Ledger, schedules: Compiled, settings: Settings) -> Study:
         day_std=frozen(ledger.watch.day_std[shown]),
         day_worst=frozen(ledger.watch.day_worst[shown]),
         warnings=tuple(warnings),
+        exactness=exactness,
     )
