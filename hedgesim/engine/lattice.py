@@ -31,7 +31,7 @@ class Level:
     Attributes
     ----------
     nodes : lattice nodes to the narrowest standard deviation, of a step or of a delta
-    reach : standard deviations at which steps and states are cut
+    reach : standard deviations at which steps are cut
     """
 
     nodes: float
@@ -40,7 +40,7 @@ class Level:
 
 def level(number: int) -> Level:
     """The refinements in turn; the spacing shrinks by a third each time."""
-    return Level(nodes=1.5 * 1.5**number, reach=6.5 + 0.5 * number)
+    return Level(nodes=1.65 * 1.5**number, reach=6.3 + 0.35 * number)
 
 
 @dataclass(frozen=True)
@@ -126,7 +126,9 @@ def lay_schedule(inputs: Inputs, underlying: int, trades_at: Flags, at: Level, n
     """Lattice, steps and trades of one schedule on one underlying."""
     looks = np.flatnonzero(trades_at)
     market, costs, grid = inputs.market, inputs.costs, inputs.grid
-    lattice, kind, first, last, density, law = lay_lattice(inputs, underlying, looks, at, name)
+    lattice, kind, first, last, density, law = lay_lattice(
+        inputs, underlying, looks, at, name, state_reach=at.reach - 1.0
+    )
     t = grid.t[looks]
     discount = np.exp(-market.rate * t)
     price = np.exp((market.growth[underlying] - market.rate) * t)
@@ -157,7 +159,7 @@ def lay_schedule(inputs: Inputs, underlying: int, trades_at: Flags, at: Level, n
     left_fourth = float((left[1] * largest**4 * np.exp(4 * log_x + 8.0 * variance)).sum())
     return Walk(
         lattice=lattice,
-        steps=Steps(kind, first, last, density, edges, _unit_edges(), start, gain, inner),
+        steps=Steps(kind, first, last, law / lattice.spacing, density, edges, _unit_edges(), start, gain, inner),
         trading=trading,
         strikes=strikes,
         break_room=2 * int(strikes.size.max()) + density.shape[1] + 2,
@@ -167,7 +169,7 @@ def lay_schedule(inputs: Inputs, underlying: int, trades_at: Flags, at: Level, n
 
 
 def lay_lattice(
-    inputs: Inputs, underlying: int, looks: Ints, at: Level, name: str
+    inputs: Inputs, underlying: int, looks: Ints, at: Level, name: str, *, state_reach: float
 ) -> tuple[Lattice, Ints, Ints, Ints, Floats, Floats]:
     """Lattice through `looks` with the kinds of steps on it: kind by step; first, last, density and (mean, sd) by kind.
 
@@ -196,8 +198,8 @@ def lay_lattice(
     density = np.exp(-0.5 * z * z) * spacing / (law[:, 1:] * np.sqrt(2 * np.pi))
     density[offset > last[:, None]] = 0.0
     sd = np.sqrt(variance)
-    low = np.floor((drift - at.reach * sd) / spacing).astype(np.int64)
-    high = np.ceil((drift + at.reach * sd) / spacing).astype(np.int64)
+    low = np.floor((drift - state_reach * sd) / spacing).astype(np.int64)
+    high = np.ceil((drift + state_reach * sd) / spacing).astype(np.int64)
     # A break in the outermost cell has a stencil that reaches beyond it.
     pad_low = np.minimum(low, np.append(low[:1], low[:-1] + first[kind])) - STENCIL
     pad_high = np.maximum(high, np.append(high[:1], high[:-1] + last[kind])) + STENCIL
@@ -299,29 +301,45 @@ def _gains(
     start = np.concatenate([[0], np.cumsum(width)[:-1]])
     gain, inner = np.empty(int(width.sum())), np.zeros(int(width.sum()))
     third, fourth = np.zeros(steps), np.zeros(steps)
+    known: dict[tuple[int, bytes], tuple[Floats, Floats]] = {}
+    plain: dict[int, Floats] = {}
+    distances = {int(f): spacing * (f - BEHIND - 1 + np.arange(w)) for f, w in zip(first, width, strict=True)}
     for k in range(steps):
-        part = slice(start[k], start[k] + width[k])
-        distance = spacing * (first[k] - BEHIND - 1 + np.arange(width[k]))
-        weight = inputs.weight[underlying, looks[k] : looks[k + 1]]
-        change = np.diff(weight)
-        if not change.any():
-            gain[part] = weight[0] * np.expm1(distance)
+        part, distance = slice(start[k], start[k] + width[k]), distances[int(first[k])]
+        scale = inputs.weight[underlying, looks[k]]
+        weight = inputs.weight[underlying, looks[k] : looks[k + 1]] / scale
+        if len(weight) == 1 or not np.diff(weight).any():
+            if int(first[k]) not in plain:
+                plain[int(first[k])] = np.expm1(distance)
+            gain[part] = scale * plain[int(first[k])]
             continue
-        # Abel: sum w_l dX_l = w_last X_end - w_first X_start - sum (w_l - w_l-1) X_l over the looks inside.
+        # Steps alike but for the level of their weights share a calculation.
         here = slice(looks[k], looks[k + 1] + 1)
         drift = inputs.log_drift[underlying, here] - inputs.log_drift[underlying, looks[k]]
         variance = inputs.variance[underlying, here] - inputs.variance[underlying, looks[k]]
-        share = (variance / variance[-1])[1:-1]
-        widest = variance[-1] * share * (1.0 - share)
-        within = change * np.exp(drift[1:-1] + np.outer(distance - drift[-1], share) + 0.5 * widest)
-        gain[part] = weight[-1] * np.exp(distance) - weight[0] - within.sum(axis=1)
-        inner[part] = _bridge_variance(within, share, float(variance[-1]))
+        alike = (int(first[k]), np.round(np.concatenate([weight, drift, variance]), 14).tobytes())
+        if alike not in known:
+            known[alike] = _bridge(distance, weight, drift, variance)
+        gain[part], inner[part] = scale * known[alike][0], scale**2 * known[alike][1]
         usual = np.abs(distance - drift[-1]) < 4.0 * np.sqrt(variance[-1])
-        largest = float(inner[part][usual].max())
+        largest, spread = float(inner[part][usual].max()), 0.25 * float(variance[-1])
         # Third cumulant of a sum of lognormals to leading order: at most 3 v^2 sd / sqrt(v), v its variance.
-        third[k] = 3.0 * largest**1.5 * float(np.sqrt(widest.max()))
-        fourth[k] = 16.0 * largest**2 * float(widest.max())
+        third[k] = 3.0 * largest**1.5 * spread**0.5
+        fourth[k] = 16.0 * largest**2 * spread
     return start, gain, inner, (third, fourth)
+
+
+def _bridge(distance: Floats, weight: Floats, drift: Floats, variance: Floats) -> tuple[Floats, Floats]:
+    """Mean and variance of sum w_l dX_l over X at its start, given the log distance of the two ends.
+
+    By Abel's sum it is w_last X_end - w_first X_start - sum (w_l - w_l-1) X_l over the looks inside; `drift` and
+    `variance` run from the start.
+    """
+    share = (variance / variance[-1])[1:-1]
+    between = drift[1:-1] + np.outer(distance - drift[-1], share) + 0.5 * variance[-1] * share * (1.0 - share)
+    inside = np.diff(weight) * np.exp(between)
+    mean = weight[-1] * np.exp(distance) - weight[0] - inside.sum(axis=1)
+    return mean, _bridge_variance(inside, share, float(variance[-1]))
 
 
 def _bridge_variance(mean: Floats, share: Floats, variance: float) -> Floats:

@@ -290,16 +290,17 @@ def find_breaks(
 
 @device
 def find_turns(
-    breaks: Breaks, state: Floats, held: Floats, sources: int, base: int, cells: int, edges: Floats, means: Floats
-) -> int:
+    breaks: Breaks, state: Floats, held: Floats, first_source: int, sources: int, base: int, cells: int, edges: Floats,
+    means: Floats,
+) -> int:  # fmt: skip
     """Breaks of steps on which nothing settles and tickets are free: where the trade changes sign, and no others.
 
     Takes the trapezoid error off the mean costs at once, and keeps the cost of the trade in `breaks.costs[:, 0]`, with
-    the sign it has beyond the break. Sources, base, cells as for `find_breaks`.
+    the sign it has beyond the break. The sources from `first_source` up to `sources` of the block are looked at.
     """
     hedge, unit_cost = state[HEDGE], state[UNIT_COST]
     found = 0
-    for i in range(sources):
+    for i in range(first_source, sources):
         h, m = held[i], base + i
         above = hedge[m] > h
         for c in range(cells):
@@ -314,7 +315,7 @@ def find_turns(
             second = 0.5 * (f2 - 2.0 * f1 + f0)
             first = f2 - f1 - second - third
             u = f1 / (f1 - f2)
-            for _ in range(3):
+            for _ in range(2):
                 value = f1 + u * (first + u * (second + u * third))
                 rise = first + u * (2.0 * second + 3.0 * u * third)
                 if rise != 0.0:

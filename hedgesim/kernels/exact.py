@@ -79,6 +79,7 @@ class Steps(NamedTuple):
     ----------
     kind : row of the tables that steps of one mean and sd share
     first, last : (kind,) offsets, in nodes, that a step can reach
+    law : (kind, 2) mean and standard deviation of the step, in nodes
     density : (kind, offset) lattice weights of the step from offset `first` on
     edges : (kind, cell, bin, STENCIL) see `edge_weights`; empty when no integrand breaks
     unit : (1, bin, STENCIL) edge weights of a plain sum, see `folds.mend`
@@ -90,6 +91,7 @@ class Steps(NamedTuple):
     kind: Ints
     first: Ints
     last: Ints
+    law: Floats
     density: Floats
     edges: Floats
     unit: Floats
@@ -164,34 +166,52 @@ def _deviations(
 
 
 @device
-def _accumulate_squares(weight: float, a: Floats, b: Floats, out: Floats) -> None:
-    for i in range(len(a)):
-        out[i] = fma(weight * a[i], b[i], out[i])
+def _accumulate_squares(weight: float, d_gross: Floats, d_costs: Floats, out: Floats) -> None:
+    """Add one offset's share of the squares of gross, of gross times costs, and of costs; `out` is (3, source)."""
+    gross, cross, costs = out[0], out[1], out[2]
+    for i in range(len(d_gross)):
+        scaled = weight * d_gross[i]
+        gross[i] = fma(scaled, d_gross[i], gross[i])
+        cross[i] = fma(scaled, d_costs[i], cross[i])
+    for i in range(len(d_gross)):
+        costs[i] = fma(weight * d_costs[i], d_costs[i], costs[i])
 
 
 @device
 def _accumulate_powers(
-    weight: float, inner: float, held_x: Floats, second: Floats, third: Floats, fourth: Floats,
-    d_gross: Floats, d_costs: Floats, out: Floats, deviation: Floats, spread: Floats,
+    weight: float, second: Floats, third: Floats, fourth: Floats, d_gross: Floats, d_costs: Floats, out: Floats,
+    deviation: Floats,
 ) -> None:  # fmt: skip
-    """Add one offset's share of the central moments of the total; `out` is (3, source), the last two are scratch."""
-    n = len(held_x)
+    """Add one offset's share of the central moments of the total; `out` is (3, source), `deviation` scratch."""
+    n = len(d_gross)
+    two, three, four = out[0], out[1], out[2]
     for i in range(n):
-        deviation[i] = d_gross[i] + d_costs[i]
-    for i in range(n):
-        spread[i] = fma(held_x[i] * held_x[i], inner, second[i])
-    for i in range(n):
-        out[0, i] = fma(weight, fma(deviation[i], deviation[i], spread[i]), out[0, i])
+        t = d_gross[i] + d_costs[i]
+        deviation[i] = t
+        two[i] = fma(weight, fma(t, t, second[i]), two[i])
     for i in range(n):
         t = deviation[i]
-        out[1, i] = fma(weight, fma(t, fma(t, t, 3.0 * spread[i]), third[i]), out[1, i])
+        three[i] = fma(weight, fma(t, fma(t, t, 3.0 * second[i]), third[i]), three[i])
     for i in range(n):
-        # The gain given both ends of a step counts as normal beyond its variance: fourth moment 3 variance^2.
         t = deviation[i]
-        own = spread[i] - second[i]
-        rest = fma(t * t, fma(t, t, 6.0 * spread[i]), 4.0 * t * third[i])
-        rest += own * fma(3.0, own, 6.0 * second[i])
-        out[2, i] = fma(weight, rest + fourth[i], out[2, i])
+        rest = fma(t * t, fma(t, t, 6.0 * second[i]), 4.0 * t * third[i])
+        four[i] = fma(weight, rest + fourth[i], four[i])
+
+
+@device
+def _accumulate_inner(
+    weight: float, inner: float, held_x: Floats, second: Floats, deviation: Floats, squares: Floats, powers: Floats
+) -> None:
+    """Add what the gain between the ends of a step contributes, normal given them, of variance `inner` X^2 a unit."""
+    two, three, four = powers[0], powers[1], powers[2]
+    for i in range(len(held_x)):
+        own = weight * inner * held_x[i] * held_x[i]
+        squares[i] += own
+        two[i] += own
+    for i in range(len(held_x)):
+        own, t = inner * held_x[i] * held_x[i], deviation[i]
+        three[i] += 3.0 * weight * own * t
+        four[i] += 3.0 * weight * own * (2.0 * t * t + own + 2.0 * second[i])
 
 
 @device
@@ -298,9 +318,9 @@ def run_schedule(
         np.empty((room, 2, STENCIL)),
     )
     held, held_x = np.empty(_BLOCK), np.empty(_BLOCK)
-    d_gross, d_costs, deviation, spread = np.empty(_BLOCK), np.empty(_BLOCK), np.empty(_BLOCK), np.empty(_BLOCK)
+    d_gross, d_costs, deviation = np.empty(_BLOCK), np.empty(_BLOCK), np.empty(_BLOCK)
     fold_cell, fold_theta = np.empty(_MOST_FOLDS, dtype=np.int64), np.empty(_MOST_FOLDS)
-    fold_weights = np.empty(STENCIL)
+    fold_weights, fold_strength = np.empty(STENCIL), np.empty(_MOST_FOLDS)
     means, squares, powers = np.empty((2, _BLOCK)), np.empty((3, _BLOCK)), np.empty((3, _BLOCK))
     out[:] = 0.0
     costly = False
@@ -353,7 +373,11 @@ def run_schedule(
                 means[0, i] = fma(held_x[i], expected_gain, means[0, i])
             found = 0
             if turning:
-                found = find_turns(breaks, after, held, nb, base, reached - 1, steps.edges[kind], means)
+                # Prices in the outermost twentieth at either end are too unlikely for the kinks of costs to matter.
+                margin = (lattice.high[k] - lattice.low[k]) // 20
+                begins = max(0, lattice.low[k] + margin - block)
+                ends = min(nb, lattice.high[k] - margin + 1 - block)
+                found = find_turns(breaks, after, held, begins, ends, base, reached - 1, steps.edges[kind], means)
             elif costly or kinks > 0:
                 for i in range(nb):
                     found = find_breaks(
@@ -370,15 +394,16 @@ def run_schedule(
                     after[NET, a:b], held[:nb], held_x, trading.smallest, ticket, means[0], means[1], d_gross,
                     d_costs,
                 )  # fmt: skip
-                _accumulate_squares(density[o], d_gross[:nb], d_gross, squares[0])
-                _accumulate_squares(density[o], d_gross[:nb], d_costs, squares[1])
-                _accumulate_squares(density[o], d_costs[:nb], d_costs, squares[2])
+                _accumulate_squares(density[o], d_gross[:nb], d_costs, squares)
                 _accumulate_powers(
-                    density[o], steps.inner[begin + o], held_x[:nb], after[SECOND, a:b], after[THIRD, a:b],
-                    after[FOURTH, a:b], d_gross, d_costs, powers, deviation, spread,
+                    density[o], after[SECOND, a:b], after[THIRD, a:b], after[FOURTH, a:b], d_gross[:nb], d_costs,
+                    powers, deviation,
                 )  # fmt: skip
-                for i in range(nb):
-                    squares[0, i] = fma(density[o] * steps.inner[begin + o], held_x[i] * held_x[i], squares[0, i])
+                inner = steps.inner[begin + o]
+                if inner != 0.0:
+                    _accumulate_inner(
+                        density[o], inner, held_x[:nb], after[SECOND, a:b], deviation, squares[0], powers
+                    )  # fmt: skip
             if turning:
                 correct_turns(
                     breaks, found, after, held_x, stencil_gain, stencil_inner, base, means, squares, powers
@@ -397,8 +422,10 @@ def run_schedule(
         if costly:
             reachable = lattice.pad_high[k + 1] - lattice.pad_low[k + 1] + 1
             folds = find_folds(
-                now[HEDGE], offset, end, after[NET, :reachable], trading.smallest, ticket, fold_cell, fold_theta
-            )
+                now[HEDGE], offset, end, after[NET, :reachable], lattice.pad_low[k] - lattice.pad_low[k + 1] + first,
+                first, reached, steps.law[kind, 0], steps.law[kind, 1], trading.smallest, ticket, fold_cell, fold_theta,
+                fold_strength,
+            )  # fmt: skip
             # Gross P&L has no folds: what costs add to the variance is mended alone, so that the fit cannot harm the
             # rest. Third and fourth moments stay as they are.
             if folds > 0:
@@ -407,7 +434,7 @@ def run_schedule(
                 for f in range(folds):
                     edge_at(steps.unit, 0, fold_theta[f], fold_weights)
                     for row in (COSTS, SQUARES + 1, SQUARES + 2):
-                        mend(now[row], offset, end, fold_cell[f], fold_theta[f], fold_weights)
+                        mend(now[row], offset, end, fold_cell[f], fold_theta[f], fold_strength[f], fold_weights)
                 for i in range(offset, end + 1):
                     now[SECOND, i] += 2.0 * now[SQUARES + 1, i] + now[SQUARES + 2, i]
         for i in range(offset, end + 1):

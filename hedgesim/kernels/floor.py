@@ -153,6 +153,8 @@ def run_floor(
         past[:after] = 0.0
         for o in range(reached):
             begin, end_at = max(0, -shift - o), min(n, after - shift - o)
+            if end_at <= begin:
+                continue
             weight, target = density[o], past[max(0, shift + o) :]
             source = gap[begin:end_at]
             for j in range(len(source)):

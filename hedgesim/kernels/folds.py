@@ -14,24 +14,43 @@ Ints = NDArray[np.int64]
 
 @device
 def find_folds(
-    hedge: Floats, low: int, high: int, net: Floats, smallest: float, ticket: float, cells: Ints, theta: Floats
+    hedge: Floats, low: int, high: int, net: Floats, shift: int, first: int, reached: int, mean: float, sd: float,
+    smallest: float, ticket: float, cells: Ints, theta: Floats, strength: Floats,
 ) -> int:  # fmt: skip
     """Where the expected costs of the step from a trade are not smooth in the log price at the trade.
 
-    They are smooth wherever the next hedge varies with the next price. They bend where the hedge passes a level at
-    which the next one stays (none after the unwinding, all or nothing delivered); and ticket charges jump where the
-    hedge itself settles to within `smallest` of a level.
+    They are smooth wherever the next hedge varies with the next price as the hedge does with the price. They bend where
+    the hedge passes a level at which the next one stays, none after the unwinding or all or nothing delivered; and
+    nearly so, over sd |dH| / |dh| nodes, where the next hedge H varies much less than the hedge h. Ticket charges jump
+    where the hedge itself settles to within `smallest` of a level.
 
     Parameters
     ----------
     hedge : at the nodes; those from `low` to `high` count
-    net : the next hedge, less what is delivered, at its nodes
-    cells, theta : overwritten with the folds; at most len(cells)
+    net : the next hedge, less what is delivered, at its nodes; the step from node n reaches index n + shift, its
+        offset `first`, and the next `reached` - 1
+    mean, sd : of the step, in nodes
+    cells, theta, strength : overwritten with the folds, at most len(cells), and how much of its first Fourier mode a
+        nearly sharp fold has kept
     """
     count = 0
     flat = 1e3 * smallest
-    levels = np.empty(len(cells))
-    found, m = 0, 0
+    whole = math.floor(mean)
+    inside = mean - whole
+    for n in range(low + 1, high - 1):
+        m = n + whole - first + shift
+        if m < 0 or m + 2 >= len(net):
+            continue
+        here, there = (1.0 - inside) * net[m] + inside * net[m + 1], (1.0 - inside) * net[m + 1] + inside * net[m + 2]
+        a, b = hedge[n] - here, hedge[n + 1] - there
+        if (a > 0.0) != (b > 0.0) and abs(a) + abs(b) > flat and count < len(cells):
+            width = sd * abs(there - here) / abs(b - a)
+            if width < 0.5:
+                cells[count], theta[count] = n, a / (a - b)
+                strength[count] = math.exp(-2.0 * math.pi * math.pi * width * width)
+                count += 1
+    near = count
+    m = 0
     while m < len(net) - 1:
         begin = m
         while m < len(net) - 1 and abs(net[m + 1] - net[m]) <= flat:
@@ -40,18 +59,18 @@ def find_folds(
             m += 1
             continue
         level = net[(begin + m) // 2]
-        fresh = found < len(levels)
-        for q in range(found):
-            fresh = fresh and abs(levels[q] - level) > flat
-        if not fresh:
-            continue
-        levels[found] = level
-        found += 1
-        for n in range(low, high):
+        for n in range(max(low + 1, begin - shift - reached + 1), min(high - 1, m - shift + 1)):
             a, b = hedge[n] - level, hedge[n + 1] - level
-            if (a > 0.0) != (b > 0.0) and abs(a) + abs(b) > flat and low < n < high - 1 and count < len(cells):
-                cells[count], theta[count] = n, root_in_cell(hedge, n, level, 0.0, 1.0, a, b)
-                count += 1
+            if (a > 0.0) != (b > 0.0) and abs(a) + abs(b) > flat and count < len(cells):
+                seen = False
+                for q in range(near):
+                    seen = seen or abs(cells[q] - n) <= 1
+                for q in range(near, count):
+                    seen = seen or cells[q] == n
+                if not seen:
+                    cells[count], theta[count] = n, root_in_cell(hedge, n, level, 0.0, 1.0, a, b)
+                    strength[count] = 1.0
+                    count += 1
     if ticket == 0.0:
         return count
     m = low
@@ -74,12 +93,13 @@ def find_folds(
                 away = outer / (outer - inner)
                 cells[count] = node if side == 0 else node - 1
                 theta[count] = away if side == 0 else 1.0 - away
+                strength[count] = 1.0
                 count += 1
     return count
 
 
 @device
-def mend(values: Floats, low: int, high: int, m: int, theta: float, weights: Floats) -> None:
+def mend(values: Floats, low: int, high: int, m: int, theta: float, strength: float, weights: Floats) -> None:
     """Change node values about a fold at m + theta so that plain sums over them miss nothing there.
 
     The jump of value, slope and curvature comes from cubics through four nodes on either side; `weights` are the edge
@@ -107,4 +127,4 @@ def mend(values: Floats, low: int, high: int, m: int, theta: float, weights: Flo
         return
     for k in range(STENCIL):
         away = k - BEHIND - theta
-        values[m - BEHIND + k] -= weights[k] * (jump + away * (slope + 0.5 * away * bend))
+        values[m - BEHIND + k] -= strength * weights[k] * (jump + away * (slope + 0.5 * away * bend))
