@@ -184,18 +184,18 @@ def _accumulate_powers(
 ) -> None:  # fmt: skip
     """Add one offset's share of the central moments of the total; `out` is (3, source), `deviation` scratch."""
     n = len(d_gross)
-    two, three, four = out[0], out[1], out[2]
     for i in range(n):
-        t = d_gross[i] + d_costs[i]
-        deviation[i] = t
-        two[i] = fma(weight, fma(t, t, second[i]), two[i])
+        deviation[i] = d_gross[i] + d_costs[i]
     for i in range(n):
         t = deviation[i]
-        three[i] = fma(weight, fma(t, fma(t, t, 3.0 * second[i]), third[i]), three[i])
+        out[0, i] = fma(weight, fma(t, t, second[i]), out[0, i])
+    for i in range(n):
+        t = deviation[i]
+        out[1, i] = fma(weight, fma(t, fma(t, t, 3.0 * second[i]), third[i]), out[1, i])
     for i in range(n):
         t = deviation[i]
         rest = fma(t * t, fma(t, t, 6.0 * second[i]), 4.0 * t * third[i])
-        four[i] = fma(weight, rest + fourth[i], four[i])
+        out[2, i] = fma(weight, rest + fourth[i], out[2, i])
 
 
 @device
