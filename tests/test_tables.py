@@ -101,3 +101,11 @@ def test_payoff_lines_are_the_payoffs_and_deliveries_of_the_positions(seed):
             assert line[:, 0] + line[:, 1] * x == pytest.approx(paid, abs=1e-9 * np.abs(book.units).sum() * price.max())
             handed = (inside * sign * book.physical[j]) @ book.units[j]
             assert line[:, 2] == pytest.approx(handed, abs=1e-9)
+
+
+def test_a_lookup_of_a_length_that_does_not_fill_the_lanes_is_refused():
+    case = random_experiment(0)
+    market, book, grid = case["market"], case["book"], case["grid"]
+    table = slope_table(book, market, grid, case["source"].reach(market, grid), vol=book.hedge_vol, looks=np.arange(2))
+    with pytest.raises(ValueError, match="multiple of LANES"):
+        read(table, 0, 0, np.full(13, np.log(market.spot[0])))

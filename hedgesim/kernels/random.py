@@ -148,6 +148,8 @@ def draw_normals(
     `late` (one longer) are scratch.
     """
     n = out.shape[0]
+    if n % LANES != 0:
+        raise ValueError("the length of the tile must be a multiple of LANES")
     a_, b_, c_, w_ = state[0], state[1], state[2], state[3]
     for p in range(n):
         a, b, c, w = a_[p], b_[p], c_[p], w_[p]

@@ -98,6 +98,8 @@ def lookup(
 
     All arrays have the same length, a multiple of `LANES`; `cell` and `part` are scratch.
     """
+    if len(log_price) % LANES != 0:
+        raise ValueError("the number of log prices must be a multiple of LANES")
     cells = table.cells[underlying, look]
     if cells == 0:
         for p in range(len(log_price)):
