@@ -301,23 +301,25 @@ def _gains(
     start = np.concatenate([[0], np.cumsum(width)[:-1]])
     gain, inner = np.empty(int(width.sum())), np.zeros(int(width.sum()))
     third, fourth = np.zeros(steps), np.zeros(steps)
-    known: dict[tuple[int, bytes], tuple[Floats, Floats]] = {}
-    plain: dict[int, Floats] = {}
-    distances = {int(f): spacing * (f - BEHIND - 1 + np.arange(w)) for f, w in zip(first, width, strict=True)}
+    known: dict[tuple[int, int, bytes], tuple[Floats, Floats]] = {}
+    plain: dict[tuple[int, int], Floats] = {}
+    # Steps that start alike may still end apart, where their laws differ by little.
+    reach = [(int(f), int(w)) for f, w in zip(first, width, strict=True)]
+    distances = {(f, w): np.asarray(spacing * (f - BEHIND - 1 + np.arange(w)), dtype=np.float64) for f, w in reach}
     for k in range(steps):
-        part, distance = slice(start[k], start[k] + width[k]), distances[int(first[k])]
+        part, distance = slice(start[k], start[k] + width[k]), distances[reach[k]]
         scale = inputs.weight[underlying, looks[k]]
         weight = inputs.weight[underlying, looks[k] : looks[k + 1]] / scale
         if len(weight) == 1 or not np.diff(weight).any():
-            if int(first[k]) not in plain:
-                plain[int(first[k])] = np.expm1(distance)
-            gain[part] = scale * plain[int(first[k])]
+            if reach[k] not in plain:
+                plain[reach[k]] = np.expm1(distance)
+            gain[part] = scale * plain[reach[k]]
             continue
         # Steps alike but for the level of their weights share a calculation.
         here = slice(looks[k], looks[k + 1] + 1)
         drift = inputs.log_drift[underlying, here] - inputs.log_drift[underlying, looks[k]]
         variance = inputs.variance[underlying, here] - inputs.variance[underlying, looks[k]]
-        alike = (int(first[k]), np.round(np.concatenate([weight, drift, variance]), 14).tobytes())
+        alike = (*reach[k], np.round(np.concatenate([weight, drift, variance]), 14).tobytes())
         if alike not in known:
             known[alike] = _bridge(distance, weight, drift, variance)
         gain[part], inner[part] = scale * known[alike][0], scale**2 * known[alike][1]
