@@ -23,7 +23,7 @@ HEADINGS = {
     "es975 cost_mean std_gross std_floor removable delta_mean delta_p99 exact_mean exact_std "
     "es975_se cost_mean_se std_gross_se std_floor_se removable_se removable_share removable_share_se day_std day_worst "
     "mean_cost mean_cost_se risk risk_se objective objective_se difference difference_se within_limit tied efficient "
-    "chosen",
+    "chosen p01_exactly_scaled p05_exactly_scaled es975_exactly_scaled",
     "breakdown": "schedule underlying component mean mean_se std share",
     "frequency": "schedule interval_years trades var_discretisation var_floor var_costs cov_discretisation_floor "
     "cov_discretisation_costs cov_floor_costs var_gross removable var_total "
@@ -33,6 +33,11 @@ HEADINGS = {
     "var_total_se fitted law_removable law_removable_se cost_exponent cost_exponent_se below_look",
     "price_of_risk": "schedule mean_cost mean_cost_se risk risk_se next_finer price price_se best_from best_to "
     "within_limit tied",
+}
+# Only where the exact engine answers.
+EXACT_HEADINGS = {
+    "curve": "N mean_cost std var_gross var_floor removable objective",
+    "break_even": "schedule vol_shift sold_vol amount cushion cushion_amount note",
 }
 SIMULATED = {"premium_edge", "revaluation", "vol_gap", "sampling", "lag", "remainder", "costs"}
 REPLAYED = {"premium_edge", "revaluation", "vol_gap_seen", "vol_mark", "lag", "remainder", "costs"}
@@ -81,7 +86,13 @@ def test_every_experiment_checks(config):
         assert f"\n  {rule.name} " in done.stdout
 
 
-def test_every_file_of_the_contract_is_there(folder):
+def answers_exactly(experiment):
+    return experiment.paths.source == "gbm" and not experiment.market.correlation
+
+
+def test_every_file_of_the_contract_is_there(finished):
+    folder, experiment = finished
+    exact = {f"{name}.csv" for name in EXACT_HEADINGS} if answers_exactly(experiment) else set()
     assert {path.name for path in folder.iterdir()} == {
         "report.pdf",
         "figures",
@@ -91,6 +102,7 @@ def test_every_file_of_the_contract_is_there(folder):
         "price_of_risk.csv",
         "findings.json",
         "experiment.yaml",
+        *exact,
     }
     assert (folder / "report.pdf").read_bytes().startswith(b"%PDF-")
     pictures = list((folder / "figures").iterdir())
@@ -99,8 +111,9 @@ def test_every_file_of_the_contract_is_there(folder):
     assert [path.name for path in folder.parent.iterdir()] == [folder.name]
 
 
-def test_columns_are_those_promised_in_their_order(folder):
-    for name, headings in HEADINGS.items():
+def test_columns_are_those_promised_in_their_order(finished):
+    folder, experiment = finished
+    for name, headings in (HEADINGS | (EXACT_HEADINGS if answers_exactly(experiment) else {})).items():
         assert (folder / f"{name}.csv").read_text().split("\n", 1)[0].split(",") == headings.split()
 
 
@@ -176,7 +189,8 @@ def test_variance_parts_add_to_the_total(finished, schedules):
     np.testing.assert_allclose(table["var_gross"] - table["var_floor"], table["removable"], rtol=TOLERANCE)
 
 
-def test_findings_agree_with_the_tables(folder, schedules):
+def test_findings_agree_with_the_tables(finished, schedules):
+    folder, experiment = finished
     found = json.loads((folder / "findings.json").read_text())
     chosen = schedules[schedules["chosen"]].iloc[0]
     assert found["choice"]["schedule"] == chosen["schedule"]
@@ -187,7 +201,9 @@ def test_findings_agree_with_the_tables(folder, schedules):
     assert found["choice"]["mean_cost"]["value"] == pytest.approx(chosen["mean_cost"], rel=1e-12)
     assert found["versions"]["hedgesim"] == hedgesim.__version__
     assert len(found["hashes"]["experiment"]) == 64
-    assert set(found["seconds"]) == {"prepare", "engine", "study", "report"}
+    assert set(found["seconds"]) == {"prepare", "engine", "study", "report"} | (
+        {"exact"} if experiment.paths.source == "gbm" else set()
+    )
     assert found["sentence"].endswith(".")
     assert isinstance(found["seed"], int)
 

@@ -201,7 +201,9 @@ def test_the_written_experiment_states_every_default(tmp_path: Path) -> None:
         "hedge": {"vol": "mark", "initial": "0", "remark": "inception"},
         "schedules": [{"name": "every 1 look", "every": "1 look"}],
         "costs": {"half_spread": "0", "per_unit": "0", "per_trade": "0", "by_underlying": {}},
-        "study": {"mean": "costs", "risk": "std", "cost_of_risk": "0.5", "limit": "null", "confidence": "0.95"},
+        "study": {"mean": "costs", "risk": "std", "cost_of_risk": "0.5", "limit": "null", "confidence": "0.95",
+                "tolerance": "1e-06",
+            },
         "report": {"currency": "EUR"},
     }  # fmt: skip
 

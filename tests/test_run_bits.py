@@ -186,6 +186,6 @@ def test_with_pyarrow_the_ledger_is_a_parquet_file(home, tmp_path):
 
 def test_the_ledger_is_written_on_request_only(home, tmp_path, monkeypatch):
     asked = []
-    monkeypatch.setattr(running, "_write_ledger", lambda *arguments: asked.append(arguments))
+    monkeypatch.setattr(running, "write_ledger", lambda *arguments: asked.append(arguments))
     run_file(home / "history.yaml", out=tmp_path / "o", quiet=True)
     assert asked == []

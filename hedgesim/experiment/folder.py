@@ -16,7 +16,7 @@ _OWN = frozenset(
     [FINDINGS, "experiment.yaml", "figures", "ledger.npz", "ledger.parquet", "report.pdf"]
     # File browsers leave these.
     + [".DS_Store", "Thumbs.db"]
-    + [f"{table}.csv" for table in ("breakdown", "frequency", "price_of_risk", "schedules")]
+    + [f"{table}.csv" for table in ("break_even", "breakdown", "curve", "frequency", "price_of_risk", "schedules")]
 )
 
 

@@ -212,6 +212,9 @@ class Study(Section):
     confidence: Annotated[float, number(above=0.5, below=1, percent=True, such_as="95%")] = Field(
         default=0.95, description="confidence of intervals and of the choice"
     )
+    tolerance: Annotated[float, number(least=1e-10, most=1e-2, such_as="1e-6")] = Field(
+        default=1e-6, description="of the exact engine, a fraction of the standard deviation of P&L"
+    )
 
 
 class Report(Section):

@@ -5,7 +5,7 @@ import json
 import platform
 import time
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
@@ -19,6 +19,7 @@ from hedgesim.engine.replay import replay_laid
 from hedgesim.engine.simulate import simulate
 from hedgesim.engine.story import story
 from hedgesim.experiment.folder import FINDINGS, refuse_foreign, refuse_unwritable, replaced_at_once
+from hedgesim.experiment.ledgerfile import write_ledger
 from hedgesim.experiment.loader import Loaded, dump_experiment, load_experiment
 from hedgesim.experiment.progress import progress
 from hedgesim.experiment.resolve import (
@@ -31,8 +32,20 @@ from hedgesim.experiment.resolve import (
 )
 from hedgesim.schedules import Compiled
 from hedgesim.study import Settings, Study, study
+from hedgesim.study.distribution import distribution
+from hedgesim.study.exactness import CURVE_TOLERANCE, Exactness, exactness
 from hedgesim.study.findings import headline, sentence
-from hedgesim.study.tables import breakdown_table, frequency_table, price_of_risk_table, schedules_table, write_tables
+from hedgesim.study.projection import visible
+from hedgesim.study.tables import (
+    break_even_table,
+    breakdown_table,
+    curve_table,
+    exact_columns,
+    frequency_table,
+    price_of_risk_table,
+    schedules_table,
+    write_tables,
+)
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -74,7 +87,7 @@ class Result:
     @property
     def schedules(self) -> "pd.DataFrame":
         """A row per schedule, as in schedules.csv."""
-        return schedules_table(self.study)
+        return schedules_table(self.study, exact=exact_columns(self.study))
 
     @property
     def breakdown(self) -> "pd.DataFrame":
@@ -84,12 +97,22 @@ class Result:
     @property
     def frequency(self) -> "pd.DataFrame":
         """A row per time-based schedule, as in frequency.csv."""
-        return frequency_table(self.study)
+        return frequency_table(self.study, exact=exact_columns(self.study))
 
     @property
     def price_of_risk(self) -> "pd.DataFrame":
         """A row per efficient schedule, as in price_of_risk.csv."""
         return price_of_risk_table(self.study)
+
+    @property
+    def curve(self) -> "pd.DataFrame":
+        """A row per number of equal hedge intervals, without random numbers, as in curve.csv."""
+        return curve_table(self.study)
+
+    @property
+    def break_even(self) -> "pd.DataFrame":
+        """A row per schedule with the premiums at which it breaks even, as in break_even.csv."""
+        return break_even_table(self.study)
 
 
 def run_experiment(
@@ -136,8 +159,18 @@ def run_experiment(
         if advance is not None:
             advance(ledger.count)
     simulated = time.monotonic()
-    done = study(ledger, _compiled(plan), _settings(loaded, plan, ledger))
-    seconds = {"prepare": resolved - start, "engine": simulated - resolved, "study": time.monotonic() - simulated}
+    settings = _settings(loaded, plan, ledger)
+    without_noise = _exactness(ledger, plan, settings, threads) if isinstance(plan, Simulation) else None
+    if without_noise is not None and without_noise.reason:
+        plan = replace(plan, notes=(*plan.notes, f"exact figures are missing - {without_noise.reason}"))
+    told = time.monotonic()
+    done = study(ledger, _compiled(plan), settings, exactness=without_noise)
+    seconds = {
+        "prepare": resolved - start,
+        "engine": simulated - resolved,
+        **({"exact": told - simulated} if without_noise is not None else {}),
+        "study": time.monotonic() - told,
+    }
     return Result(loaded=loaded, plan=plan, ledger=ledger, study=done, seconds=seconds)
 
 
@@ -234,6 +267,24 @@ def _settings(loaded: Loaded, plan: Simulation | Replay, ledger: Ledger) -> Sett
         currency=loaded.experiment.report.currency,
         hidden=hidden,
         equal_looks=bool(np.ptp(steps) <= 1e-6 * steps.mean()),
+        tolerance=wanted.tolerance,
+    )
+
+
+def _exactness(ledger: Ledger, plan: Simulation, settings: Settings, threads: int | None) -> Exactness:
+    shown = visible(ledger, settings.hidden)
+    return exactness(
+        ledger,
+        shown,
+        distribution(ledger, shown),
+        market=plan.market,
+        book=plan.book,
+        grid=plan.grid,
+        compiled=plan.compiled,
+        source=plan.source,
+        costs=plan.costs,
+        settings=settings,
+        threads=threads,
     )
 
 
@@ -255,13 +306,13 @@ def _write(result: Result, fresh: Path, folder: Path, *, hashes: dict[str, str],
     if isinstance(result.plan, Replay):
         # The folder may be anywhere: the price file is named in full, so that experiment.yaml reruns.
         price_file = str(result.plan.price_file.resolve())
-    write_tables(result.study, fresh)
+    write_tables(result.study, fresh, exact=exact_columns(result.study))
     (fresh / "experiment.yaml").write_text(
         dump_experiment(result.loaded.experiment, price_file=price_file), encoding="utf-8"
     )
     write_report(result.study, _facts(result, hashes), fresh, created=created)
     if ledger:
-        _write_ledger(result.ledger, result.study.schedules, fresh)
+        write_ledger(result.ledger, result.study.schedules, fresh)
     seconds = result.seconds | {"report": time.monotonic() - start}
     found = {
         "title": result.loaded.experiment.title,
@@ -276,37 +327,6 @@ def _write(result: Result, fresh: Path, folder: Path, *, hashes: dict[str, str],
     }
     text = json.dumps(found, indent=2, ensure_ascii=False, allow_nan=False)
     (fresh / FINDINGS).write_text(text + "\n", encoding="utf-8")
-
-
-def _write_ledger(ledger: Ledger, shown: tuple[str, ...], folder: Path) -> None:
-    """Components of every path under the `shown` schedules: ledger.parquet with pyarrow, ledger.npz without."""
-    if ledger.detail is None or ledger.trades_detail is None or ledger.turnover_detail is None:
-        return
-    rows = [ledger.schedules.index(name) for name in shown]
-    detail = ledger.detail[rows]
-    schedules, underlyings, _, paths = detail.shape
-    columns: dict[str, Any] = {
-        "schedule": np.repeat(np.array(shown), paths),
-        "path": np.tile(np.arange(paths), schedules),
-        "total": ledger.totals[rows].reshape(-1),
-        "trades": ledger.trades_detail[rows].reshape(-1),
-        "turnover": ledger.turnover_detail[rows].reshape(-1),
-    }
-    for c, name in enumerate(ledger.components):
-        columns[name] = detail[:, :, c].sum(axis=1).reshape(-1)
-        if underlyings > 1:
-            for u, underlying in enumerate(ledger.underlyings):
-                columns[f"{underlying}.{name}"] = detail[:, u, c].reshape(-1)
-    try:
-        import pyarrow as pa
-        import pyarrow.parquet as pq
-    except ImportError:
-        np.savez_compressed(folder / "ledger.npz", **columns)
-        return
-    columns["schedule"] = pa.DictionaryArray.from_arrays(
-        pa.array(np.repeat(np.arange(schedules), paths).astype(np.int32)), pa.array(shown)
-    )
-    pq.write_table(pa.table(columns), folder / "ledger.parquet", compression="zstd")
 
 
 def _versions() -> dict[str, str]:
@@ -383,6 +403,7 @@ def _method_lines(result: Result) -> list[str]:
             "paths: exact log steps of geometric Brownian motion; all schedules are hedged on the same paths",
             f"errors: delete-one-group jackknife, {len(ledger.replicates.mean)} groups of paths, paired by schedule",
             "book: piecewise-quintic tables in log price, delta certified to 1e-6 of the gross delta",
+            _exact_line(result.study),
         ]
     else:
         lines += [
@@ -395,6 +416,16 @@ def _method_lines(result: Result) -> list[str]:
     if ledger.count > 1:
         lines.append(f"residual delta and daily P&L: from the first {ledger.watch.paths:,} {lives}")
     return lines
+
+
+def _exact_line(study: Study) -> str:
+    if study.exactness is None or study.exactness.agreement is None:
+        return "exact engine: no figures; simulation alone"
+    closest = max(study.settings.tolerance, CURVE_TOLERANCE)
+    return (
+        f"exact engine: mean and std of every schedule to {study.settings.tolerance:g} of the std, without random "
+        f"numbers; its curve to {closest:g}"
+    )
 
 
 def _stories(result: Result) -> tuple[tuple[Story, Story], "tuple[tuple[OptionMark, ...], ...]"]:

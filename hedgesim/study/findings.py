@@ -7,10 +7,12 @@ import numpy as np
 
 from hedgesim.market import Floats
 from hedgesim.study.choice import annual_hurdle
+from hedgesim.study.exactness import SCALED_QUANTILES, Exactness
 from hedgesim.study.law import Offset, PowerLaw
 from hedgesim.study.money import money, money_with_error, percent
 from hedgesim.study.settings import RiskKind
 from hedgesim.study.studies import Study
+from hedgesim.study.theory import misses
 
 _RISK_WORDS: dict[RiskKind, str] = {
     "std": "standard deviation of P&L",
@@ -68,6 +70,7 @@ def headline(study: Study) -> dict[str, Any]:
         "removable_share": figure(parts.removable_share, parts.removable_share_se, "of gross variance"),
         "below_look_variance_estimate": _plain(parts.below_look),
         "law": _law(study.frequency.law, study.frequency.reason, cash2),
+        "exact": None if study.exactness is None else _exact(study, study.exactness, cash),
         "warnings": list(study.warnings),
     }
 
@@ -178,6 +181,111 @@ def _law(law: PowerLaw | None, reason: str, unit: str) -> dict[str, Any]:
         "left_out": [{"schedule": name, "reason": why} for name, why in law.left_out],
         "free_floor_check": _offset(law.offset, unit),
     }
+
+
+def laws_off(study: Study) -> dict[str, float]:
+    """Law -> the law over what is found for the chosen schedule, 1 where it is exact; nan where nothing compares.
+
+    Floor and costs are compared with the exact figures where there are any, else with the simulated ones; the
+    discretisation, which the exact engine does not tell from its lean on the floor, always with the simulated ones.
+    Laws of equal intervals are compared for a schedule that has them, and none where no schedule is chosen.
+    """
+    told, best = study.exactness, study.choice.chosen
+    if told is None:
+        return {}
+    place = np.flatnonzero(study.frequency.rows == best)
+    if not len(place) or not study.choice.comparable:
+        return {law.name: math.nan for law in told.laws}
+    trades, equal = float(study.frequency.trades[place[0]]), study.frequency.equal[place[0]]
+    exact = None if told.agreement is None else told.agreement.figures
+    costs = study.breakdown.mean[best, -1, study.breakdown.components.index("costs")]
+    found = {
+        "discretisation": study.variances.value.discretisation[best],
+        "floor": study.variances.value.floor[best] if exact is None else exact.variance_floor[best],
+        "cost": -(costs if exact is None else exact.mean_costs[best]),
+    }
+    return {
+        law.name: float(misses(law, trades, found[law.quantity])) if equal or law.quantity == "floor" else math.nan
+        for law in told.laws
+    }
+
+
+def _exact(study: Study, told: Exactness, cash: str) -> dict[str, Any]:
+    """What needs no random numbers."""
+    agreement, curve, gain = told.agreement, told.curve, told.gain
+    off = laws_off(study)
+    rows = range(0 if agreement is None else len(study.schedules))
+    return {
+        "reason": told.reason,
+        "notes": list(told.notes),
+        "tolerance": study.settings.tolerance,
+        "schedules": [
+            {
+                "schedule": study.schedules[i],
+                "mean": _exactly(agreement.mean[i], agreement.mean_error[i], cash),
+                "std": _exactly(agreement.std[i], agreement.std_error[i], cash),
+                "simulated_mean_off_in_se": _plain(agreement.z_mean[i]),
+                "simulated_std_off_in_se": _plain(agreement.z_std[i]),
+            }
+            for i in rows
+            if agreement is not None
+        ],
+        "optimum": None
+        if curve is None
+        else {
+            "trades": int(curve.trades[curve.best]) if curve.best >= 0 else None,
+            "objective": _plain(curve.objective[curve.best]) if curve.best >= 0 else None,
+            "note": curve.note,
+        },
+        "sensitivities": [
+            {
+                "change": s.change,
+                "trades": s.best_trades if s.best_trades >= 0 else None,
+                "objective": _plain(s.objective),
+            }
+            for s in told.sensitivities
+        ],
+        "break_even": [
+            {
+                "schedule": row.schedule,
+                "vol_shift": _plain(row.vol_shift),
+                "sold_vol": _plain(row.sold_vol),
+                "amount": _plain(row.amount),
+                "cushion_vol_shift": _plain(row.cushion),
+                "cushion_amount": _plain(row.cushion_amount),
+                "note": row.note,
+            }
+            for row in told.break_even
+        ],
+        "laws": [
+            {
+                "name": law.name,
+                "source": law.source,
+                "quantity": law.quantity,
+                "assumptions": list(law.assumptions),
+                "holds": law.holds,
+                "reason": law.reason,
+                "law_over_found_for_the_choice": _plain(off[law.name]),
+            }
+            for law in told.laws
+        ],
+        "effective_paths_gained_by_exact_scaling": None
+        if gain is None
+        else {
+            "note": gain.note,
+            "schedules": {
+                name: {
+                    figure: _figure(gain.quantile_ratio[i, k], gain.ratio_error[i, k], "times the paths")
+                    for k, figure in enumerate(SCALED_QUANTILES)
+                }
+                for i, name in enumerate(study.schedules)
+            },
+        },
+    }
+
+
+def _exactly(value: float, error: float, unit: str) -> dict[str, Any]:
+    return {"value": _plain(value), "own_error": _plain(error), "unit": unit}
 
 
 def _offset(offset: Offset | None, unit: str) -> dict[str, Any] | None:

@@ -1,6 +1,7 @@
 """A study as tables: data frames and CSV files. Column names are stable; an empty cell means that it does not apply."""
 
 from collections.abc import Mapping
+from dataclasses import asdict, fields
 from pathlib import Path
 from typing import Any
 
@@ -8,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 from hedgesim.market import Floats
+from hedgesim.study.exactness import SCALED_QUANTILES, BreakEven, exactly_scaled
 from hedgesim.study.studies import Study
 
 # File columns of the variance parts.
@@ -24,8 +26,29 @@ _PART_COLUMNS = {
 }
 EXACT_SCHEDULE_COLUMNS = ("exact_mean", "exact_std")
 EXACT_FREQUENCY_COLUMNS = ("exact_var_gross", "exact_var_floor", "exact_removable", "exact_var_total")
+_SCALED_COLUMNS = tuple(f"{name}_exactly_scaled" for name in SCALED_QUANTILES)
 
 Exact = Mapping[str, Mapping[str, float]]
+
+
+def exact_columns(study: Study) -> Exact:
+    """Figures computed without noise: schedule -> column of the two tables below -> figure; empty without any."""
+    agreement = None if study.exactness is None else study.exactness.agreement
+    if agreement is None:
+        return {}
+    figures = agreement.figures
+    columns = {
+        "exact_mean": agreement.mean,
+        "exact_std": agreement.std,
+        "exact_var_gross": figures.variance_gross,
+        "exact_var_floor": figures.variance_floor,
+        "exact_removable": figures.removable,
+        "exact_var_total": figures.variance,
+        **dict(zip(_SCALED_COLUMNS, exactly_scaled(study.distribution, agreement).T, strict=True)),
+    }
+    return {
+        name: {column: float(values[i]) for column, values in columns.items()} for i, name in enumerate(study.schedules)
+    }
 
 
 def schedules_table(study: Study, *, exact: Exact | None = None) -> pd.DataFrame:
@@ -86,6 +109,7 @@ def schedules_table(study: Study, *, exact: Exact | None = None) -> pd.DataFrame
         "tied": c.tied,
         "efficient": c.efficient,
         "chosen": (np.arange(len(study.schedules)) == c.chosen) & c.comparable,
+        **_exact_columns(study.schedules, _SCALED_COLUMNS, exact),
     }
     return pd.DataFrame(columns)
 
@@ -161,10 +185,26 @@ def price_of_risk_table(study: Study) -> pd.DataFrame:
     )
 
 
+def curve_table(study: Study) -> pd.DataFrame:
+    """A row per number of equal intervals on the exact curve; no rows without one."""
+    columns = ("N", "mean_cost", "std", "var_gross", "var_floor", "removable", "objective")
+    curve = None if study.exactness is None else study.exactness.curve
+    if curve is None:
+        return pd.DataFrame({column: np.empty(0) for column in columns})
+    values = (curve.trades, curve.mean_cost, curve.std, curve.gross, curve.floor, curve.removable, curve.objective)
+    return pd.DataFrame(dict(zip(columns, values, strict=True)))
+
+
+def break_even_table(study: Study) -> pd.DataFrame:
+    """A row per schedule with the premiums at which it breaks even, see `BreakEven`; no rows without exact figures."""
+    rows = () if study.exactness is None else study.exactness.break_even
+    return pd.DataFrame([asdict(row) for row in rows], columns=[f.name for f in fields(BreakEven)])
+
+
 def write_tables(study: Study, folder: Path, *, exact: Exact | None = None) -> tuple[Path, ...]:
     """Write schedules.csv, breakdown.csv, frequency.csv and price_of_risk.csv into an existing folder.
 
-    Floats are written to the last bit.
+    With an exact curve also curve.csv, with exact figures also break_even.csv. Floats are written to the last bit.
     """
     tables = {
         "schedules.csv": schedules_table(study, exact=exact),
@@ -172,6 +212,10 @@ def write_tables(study: Study, folder: Path, *, exact: Exact | None = None) -> t
         "frequency.csv": frequency_table(study, exact=exact),
         "price_of_risk.csv": price_of_risk_table(study),
     }
+    if study.exactness is not None and study.exactness.curve is not None:
+        tables["curve.csv"] = curve_table(study)
+    if study.exactness is not None and study.exactness.break_even:
+        tables["break_even.csv"] = break_even_table(study)
     for name, table in tables.items():
         table.to_csv(folder / name, index=False, lineterminator="\n")
     return tuple(folder / name for name in tables)
