@@ -62,7 +62,7 @@ def plain():
 
 
 def test_the_simulated_demo_lies_within_four_standard_errors(demo):
-    # 14 scores, of which two exceed 4 by chance less than once in a thousand seeds.
+    # One of 14 normal scores exceeds 4 for less than one seed in a thousand.
     agreement = demo.study.exactness.agreement
     assert np.abs(agreement.z_mean).max() < 4
     assert np.abs(agreement.z_std).max() < 4
