@@ -16,11 +16,11 @@ from pypdf import PdfReader
 from hedgesim.report import write_report
 from hedgesim.report.facts import CAUTION
 from hedgesim.report.pack import build
-from hedgesim.report.style import COMPONENT, report_style, schedule_shades
+from hedgesim.report.style import COMPONENT, report_style, schedule_shades, share_with_error, whole_clauses
 from hedgesim.report.view import view_of
 from hedgesim.study import Settings, study
 from hedgesim.study.findings import sentence
-from hedgesim.study.money import money, money_with_error
+from hedgesim.study.money import money, money_with_error, percent
 
 CREATED = datetime(2027, 3, 1, 17, 30, tzinfo=UTC)
 KINDS = {
@@ -32,6 +32,9 @@ KINDS = {
     "one inception": {"every": [1, 3, 21], "replayed": True, "paths": 1},
     "two underlyings": {"every": [1, 2, 6, 21, 63], "underlyings": ("CORVANE", "TESSOVAR"), "paths": 1500},
 }
+SETTINGS = Settings(
+    mean="costs", risk="std", cost_of_risk=0.03, limit=None, confidence=0.95, years=0.25, currency="EUR"
+)
 _cache = {}
 
 
@@ -42,19 +45,7 @@ def made(kind, **changes):
         arguments = KINDS[kind]
         book = report_builder.ledger(**arguments)
         hidden = tuple(n for n in book.schedules if n == "every look" and 1 not in arguments["every"])
-        settings = Settings(
-            **{
-                "mean": "costs",
-                "risk": "std",
-                "cost_of_risk": 0.03,
-                "limit": None,
-                "confidence": 0.95,
-                "years": 0.25,
-                "currency": "EUR",
-                "hidden": hidden,
-                **changes,
-            }
-        )
+        settings = replace(SETTINGS, hidden=hidden, **changes)
         _cache[key] = study(book, report_builder.compiled(arguments["every"]), settings), report_builder.facts(book)
     return _cache[key]
 
@@ -172,10 +163,7 @@ def test_awkward_settings_and_texts_render_without_overlap(kind, case):
 @pytest.mark.parametrize("scale", [1e-4, 1.0, 1e4, 1e9])
 def test_amounts_of_any_size_render_without_overlap(scale):
     book = report_builder.scaled(report_builder.ledger([1, 2, 6, 21], paths=400), scale)
-    settings = Settings(
-        mean="costs", risk="std", cost_of_risk=0.03, limit=None, confidence=0.95, years=0.25, currency="EUR"
-    )
-    results, facts = study(book, report_builder.compiled([1, 2, 6, 21]), settings), report_builder.facts(book)
+    results, facts = study(book, report_builder.compiled([1, 2, 6, 21]), SETTINGS), report_builder.facts(book)
     with report_style():
         pages = [faults(sheet.figure) for sheet in build(view_of(results, book), facts, created=CREATED)]
     assert [fault for page in pages for fault in page] == []
@@ -190,13 +178,10 @@ def test_long_schedule_names_render_without_overlap():
     )
     book = replace(report_builder.ledger([1, 2, 6, 21], paths=400), schedules=names)
     compiled = replace(report_builder.compiled([1, 2, 6, 21]), names=names)
-    settings = Settings(
-        mean="costs", risk="std", cost_of_risk=0.03, limit=None, confidence=0.95, years=0.25, currency="EUR"
-    )
     with report_style():
         pages = [
             faults(s.figure)
-            for s in build(view_of(study(book, compiled, settings), book), report_builder.facts(book), created=CREATED)
+            for s in build(view_of(study(book, compiled, SETTINGS), book), report_builder.facts(book), created=CREATED)
         ]
     assert [fault for page in pages for fault in page] == []
 
@@ -287,10 +272,41 @@ def test_key_table_shows_the_figures_of_the_study(kind):
         assert row[3] == money_with_error(d.std[k], d.std_se[k])
         assert row[4] == money(d.es975[k])
         assert row[6] == money(c.objective[k])
+        if results.variances.removable_share_se[k] == 0.0:
+            assert row[5] == percent(results.variances.removable_share[k])
+            continue
         shown, error = re.fullmatch(r"(-?[0-9.]+) % \(\u00b1([0-9.]+) %\)", row[5]).groups()
         half = 0.5 * 10.0 ** -len(shown.partition(".")[2]) * (1 + 1e-9)
         assert float(shown) == pytest.approx(100 * results.variances.removable_share[k], abs=half)
         assert float(error) == pytest.approx(100 * results.variances.removable_share_se[k], abs=half)
+
+
+@pytest.mark.parametrize(
+    ("value", "error", "shown"),
+    [
+        (0.818, 0.0013, "81.8 % (\u00b10.1 %)"),
+        (0.98774, 0.00003, "98.774 % (\u00b10.003 %)"),
+        (0.3, 0.096, "30.0 % (\u00b19.6 %)"),
+        (0.5, 1e-7, "50.0000 % (\u00b1< 0.0001 %)"),
+        (0.5, 0.0, "50 %"),
+        (0.5, math.nan, "50 %"),
+    ],
+)
+def test_a_share_carries_its_error_to_a_figure_that_says_something(value, error, shown):
+    assert share_with_error(value, error) == shown
+
+
+def test_long_notes_lose_whole_clauses_and_say_so():
+    assert whole_clauses("one; two; three.", 100) == "one; two; three."
+    assert whole_clauses("one; two; three.", 8) == "one; two; more in findings.json."
+
+
+def test_schedules_outside_the_law_are_grouped_by_reason():
+    every = [5, 4, 8, 10, 126]
+    results = study(report_builder.ledger(every, paths=400), report_builder.compiled(every), SETTINGS)
+    note = view_of(results, report_builder.ledger(every, paths=400)).law_note
+    assert "every 5 looks, every 4 looks, every 8 looks, every 10 looks - intervals do not divide the life" in note
+    assert "every 126 looks - does not rebalance" in note
 
 
 def test_marks_of_the_choice_stand_beside_the_right_schedules():

@@ -435,7 +435,7 @@ def simulation_lines(plan: Simulation) -> list[str]:
     source = plan.source
     lines = [f"{plan.count:,} paths of {plan.grid.looks} looks over {plan.grid.t[-1]:.4g} years, seed {source.seed}"]
     for name, vol, drift in zip(plan.market.names, source.realised_vol, source.drift, strict=True):
-        lines.append(f"  {name}: realised vol {vol:.4%}, drift {drift:.4%} a year")
+        lines.append(f"  {name}: realised vol {100 * vol:.4g}%, drift {100 * drift:.4g}% a year")
     return lines
 
 

@@ -385,7 +385,8 @@ def _book_lines(result: Result) -> list[str]:
             if value is not None
         )
         settled = ", physical" if row.settlement == "physical" else ""
-        lines.append(f"{row.underlying} {row.type} strike {row.strike}, expiry {row.expiry}, {size}{own}{settled}")
+        strike = f"{row.strike:.10g}" if isinstance(row.strike, float) else str(row.strike)
+        lines.append(f"{row.underlying} {row.type} strike {strike}, expiry {row.expiry}, {size}{own}{settled}")
     return lines
 
 

@@ -93,7 +93,7 @@ def _reading(view: View) -> list[tuple[str, str]]:
     if view.law is not None:
         parts.append(("Law", figures.law_title(view) + "."))
     else:
-        parts.append(("Law", style.clipped(view.law_note, 220)))
+        parts.append(("Law", style.whole_clauses(view.law_note, 260)))
     return parts
 
 
@@ -139,12 +139,12 @@ def variance(view: View, facts: RunFacts) -> list[Sheet]:
     left = MARGIN_MM + half + GUTTER_MM
     axes = sheet.chart(left, sheet.top, half, BOTTOM_MM, figures.law_title(view), pad=(17, 44))
     figures.frequency_law(axes, view, currency=facts.currency)
-    note = view.law_note
+    note = style.whole_clauses(view.law_note, 300)
     if math.isfinite(view.below_look):
         unseen = money(root(view.below_look), currency=facts.currency)
         note += f" Below the look an estimated std of {unseen} stays unseen."
     if note:
-        sheet.text(left, BOTTOM_MM - 15.0, style.clipped(note, 300), size=9.0, width=half, colour=style.QUIET)
+        sheet.text(left, BOTTOM_MM - 15.0, note, size=9.0, width=half, colour=style.QUIET)
     return [sheet]
 
 

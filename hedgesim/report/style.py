@@ -118,11 +118,25 @@ def clipped(text: str, most: int = 18) -> str:
 
 
 def share_with_error(value: float, error: float) -> str:
-    """A fraction in per cent with its standard error."""
-    if not (math.isfinite(value) and math.isfinite(error)):
+    """A fraction in per cent with its standard error to one figure, at most four decimals; no error below 1e-6 %."""
+    if not (math.isfinite(value) and math.isfinite(error)) or error < 1e-8:
         return percent(value)
-    decimals = 2 if 0.0 < error < 5e-4 else 1
-    return f"{100 * value:.{decimals}f} % (\u00b1{100 * error:.{decimals}f} %)"
+    leading = float(f"{100 * error:.0e}")
+    decimals = min(4, max(1, -math.floor(math.log10(leading))))
+    least = 10.0**-decimals
+    shown = f"{100 * error:.{decimals}f}" if leading >= least else f"< {least:.{decimals}f}"
+    return f"{100 * value:.{decimals}f} % (\u00b1{shown} %)"
+
+
+def whole_clauses(text: str, most: int) -> str:
+    """`text` within about `most` characters: clauses at its end are left out whole, never cut, and that is said."""
+    clauses = text.split("; ")
+    kept = clauses[:1]
+    for clause in clauses[1:]:
+        if sum(len(c) + 2 for c in kept) + len(clause) > most:
+            return "; ".join(kept) + "; more in findings.json."
+        kept.append(clause)
+    return text
 
 
 def unit_of(values: Floats) -> tuple[float, str]:

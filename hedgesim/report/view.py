@@ -10,7 +10,7 @@ from hedgesim.report.facts import RunFacts
 from hedgesim.report.style import schedule_shades
 from hedgesim.study.distribution import QUANTILE_LEVELS
 from hedgesim.study.findings import cost_of_risk_words, sentence
-from hedgesim.study.law import PowerLaw
+from hedgesim.study.law import PowerLaw, grouped_by_reason
 from hedgesim.study.studies import Study
 
 _RISK_NAMES = {"std": "standard deviation", "variance": "variance", "es975": "ES 97.5 %"}
@@ -221,21 +221,14 @@ def _steps(study: Study) -> tuple[PriceStep, ...]:
 
 def _law_note(law: PowerLaw | None, reason: str) -> str:
     if law is None:
-        return f"No law: {reason}." if reason else "No law."
+        return f"No law is fitted: {reason}." if reason else "No law is fitted."
     parts = [f"Fit over {len(law.points)} schedules"]
     if np.isfinite(law.chi2):
         parts.append(f"chi-squared {law.chi2:.3g} on {law.dof} degrees of freedom")
     if law.misfit:
         parts.append("the points bend away from it, its error is widened")
     if law.left_out:
-        by_reason: dict[str, list[str]] = {}
-        for name, why in law.left_out:
-            by_reason.setdefault(why, []).append(name)
-        told = [
-            f"{', '.join(names[:4])}{f' and {len(names) - 4} more' if len(names) > 4 else ''} ({why})"
-            for why, names in by_reason.items()
-        ]
-        parts.append("left out: " + ", ".join(told))
+        parts.append(f"left out: {grouped_by_reason(law.left_out)}")
     return "; ".join(parts) + "."
 
 

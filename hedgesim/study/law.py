@@ -20,6 +20,8 @@ _RESAMPLES_PER_POINT = 3
 # A fit that independent data would beat this rarely is called a misfit.
 _MISFIT_LEVEL = 0.01
 _FEWEST_POINTS = 3
+# Schedules left out for one reason that are named before the rest is counted.
+_NAMED = 4
 _FEWEST_POINTS_OFFSET = 5
 _EXPONENT_RANGE = (0.05, 4.0)
 
@@ -138,7 +140,7 @@ def fit_power_law(
     left_out = left_out + refused
     n = len(kept)
     if n < _FEWEST_POINTS:
-        why = "".join(f"; {name}: {reason}" for name, reason in left_out)
+        why = f"; left out: {grouped_by_reason(left_out)}" if left_out else ""
         return None, f"a law needs {_FEWEST_POINTS} equal-interval schedules, {n} can be used{why}"
     resamples = len(points.resampled)
     joint = resamples >= _RESAMPLES_PER_POINT * n
@@ -177,6 +179,17 @@ def fit_power_law(
             offset=_free_floor(points, kept) if joint and n >= _FEWEST_POINTS_OFFSET else None,
         ),
         "",
+    )
+
+
+def grouped_by_reason(left_out: tuple[tuple[str, str], ...]) -> str:
+    """Names with their reasons in words, those of one reason together."""
+    names: dict[str, list[str]] = {}
+    for name, why in left_out:
+        names.setdefault(why, []).append(name)
+    return "; ".join(
+        f"{', '.join(some[:_NAMED])}{f' and {len(some) - _NAMED} more' if len(some) > _NAMED else ''} - {why}"
+        for why, some in names.items()
     )
 
 
