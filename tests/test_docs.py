@@ -18,7 +18,9 @@ def hedgesim(*arguments: str, cwd: Path) -> str:
     """What the command prints, both streams, the progress lines left out."""
     start = [sys.executable, "-c", "from hedgesim.cli import main; main()"]
     done = subprocess.run([*start, *arguments], cwd=cwd, capture_output=True, text=True, check=False)
-    return "\n".join(line for line in (done.stdout + done.stderr).splitlines() if not line.startswith("paths: "))
+    return "\n".join(
+        line for line in (done.stdout + done.stderr).splitlines() if not line.startswith(("paths: ", "compiling"))
+    )
 
 
 def blocks(language: str) -> list[str]:

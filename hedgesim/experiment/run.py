@@ -3,6 +3,7 @@
 import hashlib
 import json
 import platform
+import sys
 import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
@@ -30,6 +31,7 @@ from hedgesim.experiment.resolve import (
     resolve,
     simulation_lines,
 )
+from hedgesim.kernels.jit import compiled_before
 from hedgesim.schedules import Compiled
 from hedgesim.study import Settings, Study, study
 from hedgesim.study.distribution import distribution
@@ -216,6 +218,8 @@ def run_file(
     refuse_foreign(folder, digest=hashes["experiment"], overwrite=overwrite)
     count = plan.count if isinstance(plan, Simulation) else len(plan.laid.inceptions)
     label = "paths" if isinstance(plan, Simulation) else "inceptions"
+    if not quiet and not compiled_before():
+        print("compiling, once for this version: about half a minute", file=sys.stderr, flush=True)
     with progress(label, count, quiet=quiet) as advance:
         result = run_experiment(loaded, threads=threads, detail=ledger, advance=advance, plan=plan)
     with replaced_at_once(folder) as fresh:

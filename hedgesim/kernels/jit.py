@@ -28,9 +28,15 @@ def _cache_folder() -> Path:
     return Path(tempfile.gettempdir()) / f"hedgesim-{os.getuid() if hasattr(os, 'getuid') else 0}" / folder.name
 
 
+_config: Any = numba.config
 if "NUMBA_CACHE_DIR" not in os.environ:
-    _config: Any = numba.config
     _config.CACHE_DIR = str(_cache_folder())
+
+
+def compiled_before() -> bool:
+    """Whether compiled kernels of this version are at hand."""
+    return any(Path(_config.CACHE_DIR).rglob("*.nbi"))
+
 
 # No fastmath: without it the same bits come out on every processor.
 kernel: Any = numba.njit(nogil=True, cache=True, error_model="numpy")
