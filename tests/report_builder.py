@@ -5,9 +5,12 @@ from dataclasses import replace
 import numpy as np
 from scipy.special import ndtr
 
+from hedgesim.engine.exact import ExactFigures
 from hedgesim.engine.ledger import Ledger, Moments, Replicates, Story, Watch
 from hedgesim.report.facts import OptionMark, RunFacts
 from hedgesim.schedules import Compiled
+from hedgesim.study.exactness import Agreement, BreakEven, Curve, Exactness, Gain, Sensitivity
+from hedgesim.study.theory import Law
 
 YEARS, SPOT, STRIKE, HEDGE_VOL, REALISED_VOL, UNITS, HALF_SPREAD = 0.25, 100.0, 102.0, 0.22, 0.20, -50_000.0, 2e-4
 
@@ -207,3 +210,109 @@ def facts(book, **changes):
         inceptions=tuple(f"inception {k}" for k in range(book.count)) if book.engine == "replay" else (),
     )
     return replace(made, **changes)
+
+
+def laws(variance, cost):
+    """Laws that hold and laws that do not: variance / N, a constant floor, cost x sqrt(N)."""
+    many = ("geometric Brownian motion", "equal intervals of variance time", "many trades")
+    one = (*many, "one option, held to expiry", "hedged at the realised vol")
+
+    def over(n):
+        return variance / np.asarray(n, dtype=float)
+
+    reason = "the book has 4 different options, the law is for one"
+    return (
+        Law("granularity", "Bertsimas, Kogan and Lo (2000)", "discretisation", many, True, "", over),
+        Law("square-root law", "Kamal and Derman (1999)", "discretisation", one, False, reason, None),
+        Law(
+            "two-term law",
+            "granularity and its next term, derived",
+            "discretisation",
+            one,
+            True,
+            "",
+            lambda n: over(n) * (1 - 0.3 / np.sqrt(n)),
+        ),
+        Law(
+            "gamma of the inception",
+            "Boyle and Emanuel (1980), N times their interval",
+            "discretisation",
+            (*many, "dollar gamma stays what it is at the inception"),
+            True,
+            "",
+            lambda n: 1.004 * over(n),
+        ),
+        Law(
+            "continuous hedging", "Ahmad and Wilmott (2005)", "floor", many[:1], True, "", lambda n: 0.0 * over(n) + 1e8
+        ),
+        Law("leading-order cost", "Leland (1985)", "cost", many, True, "", lambda n: cost * np.sqrt(n)),
+    )
+
+
+def exactness(done, *, looks=126, reason="", in_currency=False):
+    """Stand-in for exact figures beside a simulated study, a little off it: what pages draw, not what is true."""
+    d, f = done.distribution, done.frequency
+    removable = done.variances.value.removable[f.rows]
+    told = laws(float(np.mean(removable * f.trades)), float(np.mean(done.choice.mean_cost[f.rows] / np.sqrt(f.trades))))
+    if reason:
+        return Exactness(None, None, (), (), told, None, reason, 0.1)
+    off = np.where(np.arange(len(d.mean)) % 2, 0.8, -1.6)
+    mean, std = d.mean - off * d.mean_se, d.std + off * d.std_se
+    floor, gross = done.variances.value.floor, done.variances.value.gross
+    cost = -done.choice.mean_cost
+    figures = ExactFigures(
+        mean=mean,
+        variance=std**2,
+        third=0 * std,
+        fourth=3 * std**4,
+        mean_gross=mean - cost,
+        variance_gross=gross,
+        mean_floor=0 * mean,
+        variance_floor=floor,
+        mean_costs=cost,
+        variance_costs=0 * std,
+        covariance_gross_floor=floor,
+        covariance_costs_gross=0 * std,
+    )
+    trades = np.unique(np.round(np.geomspace(1, looks, 30)).astype(np.int64))
+    curve_removable = float(np.mean(removable * f.trades)) / trades
+    curve_cost = told[-1].curve(trades)
+    curve_std = np.sqrt(curve_removable + floor[0])
+    known = done.settings.risk != "es975"
+    risk = curve_std if done.settings.risk == "std" else curve_std**2
+    objective = curve_cost + done.settings.cost_of_risk * risk if known else np.full(len(trades), np.nan)
+    best = int(np.argmin(objective)) if known else -1
+    changes = ("realised vol -2 points", "realised vol +2 points", "costs x 0.5", "costs x 2", "drift -5 points")
+    return Exactness(
+        agreement=Agreement(mean, std, 1e-6 * std, 1e-6 * std, off, -off, figures),
+        curve=Curve(
+            trades,
+            curve_cost,
+            curve_std,
+            curve_removable + floor[0],
+            np.full(len(trades), floor[0]),
+            curve_removable,
+            objective,
+            best,
+            "curve to 0.0001 of the standard deviation",
+        ),
+        sensitivities=tuple(Sensitivity(c, int(trades[best]), float(objective[best])) for c in changes)
+        if known
+        else (),
+        break_even=tuple(
+            BreakEven(
+                name,
+                np.nan if in_currency else -mean[k] * 1e-7,
+                np.nan if in_currency else 0.22 - mean[k] * 1e-7,
+                -mean[k],
+                np.nan if in_currency or not known else (std[k] - mean[k]) * 1e-7,
+                std[k] - mean[k] if known else np.nan,
+                "in currency only: net vega is under a tenth of gross vega" if in_currency else "",
+            )
+            for k, name in enumerate(done.schedules)
+        ),
+        laws=told,
+        gain=Gain(np.full((len(mean), 3), [1.4, 0.9, 2.1]), np.full((len(mean), 3), 0.1), "measured over 64 groups"),
+        reason="",
+        seconds=0.1,
+    )

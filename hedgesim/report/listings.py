@@ -105,9 +105,10 @@ def inputs(view: View, facts: RunFacts) -> list[Sheet]:
     lines: list[tuple[str, bool, int]] = []
     for heading, body in blocks:
         if body:
-            lines.append((heading, True, 2))
-            for entry in body:
-                parts = wrap(entry, half, 9.0)
+            wrapped = [wrap(entry, half, 9.0) for entry in body]
+            # A heading stays with the first entry under it.
+            lines.append((heading, True, 1 + min(len(wrapped[0]), 4)))
+            for parts in wrapped:
                 lines += [(part, False, min(len(parts) - k, 4)) for k, part in enumerate(parts)]
             lines.append(("", False, 1))
     sheets: list[Sheet] = []

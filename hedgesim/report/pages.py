@@ -5,7 +5,8 @@ from collections.abc import Sequence
 
 import numpy as np
 
-from hedgesim.report import figures, outcomes, style, tradeoff
+from hedgesim.report import figures, frequency_chart, outcomes, style, tradeoff
+from hedgesim.report.exact_pages import break_even, exact
 from hedgesim.report.facts import RunFacts
 from hedgesim.report.listings import GUTTER_MM, all_cautions, count, drawn_of, inputs, new_sheet, root, schedule_tables
 from hedgesim.report.sheet import BOTTOM_MM, MARGIN_MM, TEXT_WIDTH_MM, Column, Sheet, line_height, wrap
@@ -91,7 +92,7 @@ def _reading(view: View) -> list[tuple[str, str]]:
     elif len(view.names) > 1 and np.isfinite(view.objective_se).any():
         parts.append(("How sure", f"At {percent(view.confidence)} confidence no other schedule is as good."))
     if view.law is not None:
-        parts.append(("Law", figures.law_title(view) + "."))
+        parts.append(("Law", frequency_chart.law_title(view) + "."))
     else:
         parts.append(("Law", style.whole_clauses(view.law_note, 260)))
     return parts
@@ -129,6 +130,9 @@ def variance(view: View, facts: RunFacts) -> list[Sheet]:
         return []
     half = (TEXT_WIDTH_MM - GUTTER_MM) / 2
     title = "What trading more removes, and what it cannot"
+    if view.floor[view.best] > _ROUNDING * view.gross[view.best]:
+        floor = money(root(view.floor[view.best]), currency=facts.currency)
+        title = f"What trading more removes, and the {floor} of standard deviation that it cannot"
     if facts.replayed:
         title = (
             "What trading more removes: on a price history the floor is unknown, the reference is trading at every look"
@@ -137,9 +141,10 @@ def variance(view: View, facts: RunFacts) -> list[Sheet]:
     axes = sheet.chart(MARGIN_MM, sheet.top, half, BOTTOM_MM, figures.stack_title(view), pad=(17, 44))
     figures.variance_stack(axes, view, currency=facts.currency, width_mm=half - 17)
     left = MARGIN_MM + half + GUTTER_MM
-    axes = sheet.chart(left, sheet.top, half, BOTTOM_MM, figures.law_title(view), pad=(17, 44))
-    figures.frequency_law(axes, view, currency=facts.currency)
-    note = style.whole_clauses(view.law_note, 300)
+    axes = sheet.chart(left, sheet.top, half, BOTTOM_MM, frequency_chart.law_title(view), pad=(17, 44))
+    frequency_chart.frequency_law(axes, view, currency=facts.currency)
+    theory = frequency_chart.theory_note(view)
+    note = theory + style.whole_clauses(view.law_note, 300 - len(theory))
     if math.isfinite(view.below_look):
         unseen = money(root(view.below_look), currency=facts.currency)
         note += f" Below the look an estimated std of {unseen} stays unseen."
@@ -346,5 +351,17 @@ def stories(view: View, facts: RunFacts) -> list[Sheet]:
 
 def all_pages(view: View, facts: RunFacts) -> list[Sheet]:
     """The whole pack in reading order."""
-    makers = (finding, price_of_risk, variance, shares, distribution, history, stories, schedule_tables, inputs)
+    makers = (
+        finding,
+        price_of_risk,
+        variance,
+        exact,
+        break_even,
+        shares,
+        distribution,
+        history,
+        stories,
+        schedule_tables,
+        inputs,
+    )
     return [sheet for make in makers for sheet in make(view, facts)]

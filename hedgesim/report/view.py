@@ -6,6 +6,7 @@ import numpy as np
 
 from hedgesim.engine.ledger import Ledger
 from hedgesim.market import Floats
+from hedgesim.report.exact_view import ExactView, exact_view
 from hedgesim.report.facts import RunFacts
 from hedgesim.report.style import schedule_shades
 from hedgesim.study.distribution import QUANTILE_LEVELS
@@ -56,6 +57,7 @@ class View:
         removable over gross; removable is gross less floor, for a price history gross less `reference_gross`
     reference_gross : for a price history the gross variance of the schedule that trades at every look, nan otherwise
     below_look : for a price history the estimated variance below the look
+    equal : the schedule hedges at equal intervals, so that it stands on lines over N
     fitted : the schedule belongs to the frequency law
     asymptotic : 1/N line that the removable variance tends to
     risk, risk_se, risk_name, objective, objective_se : as the choice counts them
@@ -64,6 +66,7 @@ class View:
     law, law_note : the fitted law, and what was left out of it or why there is none
     shares : breakdown rows
     steps : price list, from coarse to fine
+    exact : what needs no random numbers, None for price histories
     """
 
     names: tuple[str, ...]
@@ -92,6 +95,7 @@ class View:
     total_se: Floats
     reference_gross: float
     below_look: float
+    equal: tuple[bool, ...]
     fitted: tuple[bool, ...]
     asymptotic: Floats
     risk: Floats
@@ -112,6 +116,7 @@ class View:
     cost_of_risk: float
     confidence: float
     warnings: tuple[str, ...]
+    exact: ExactView | None = None
 
     @property
     def varied(self) -> bool:
@@ -141,6 +146,8 @@ def view_of(study: Study, ledger: Ledger) -> View:
     n = len(study.schedules)
     intervals, asymptotic, years = np.full(n, np.nan), np.full(n, np.nan), np.zeros(n)
     intervals[f.rows], asymptotic[f.rows], years[f.rows] = f.trades, f.asymptotic_removable, f.interval_years
+    equal = np.zeros(n, dtype=bool)
+    equal[f.rows] = f.equal
     order = np.lexsort((np.arange(n), -years, np.where(np.isfinite(intervals), intervals, study.trades)))
     names = tuple(study.schedules[k] for k in order)
     p01, p05 = (d.quantiles[order, QUANTILE_LEVELS.index(level)] for level in (0.01, 0.05))
@@ -175,6 +182,7 @@ def view_of(study: Study, ledger: Ledger) -> View:
         total_se=v.error.total[order],
         reference_gross=reference_gross,
         below_look=v.below_look,
+        equal=tuple(bool(x) for x in equal[order]),
         fitted=tuple(f.law is not None and name in f.law.points for name in names),
         asymptotic=asymptotic[order],
         risk=c.risk[order],
@@ -200,6 +208,7 @@ def view_of(study: Study, ledger: Ledger) -> View:
         cost_of_risk=study.settings.cost_of_risk,
         confidence=study.settings.confidence,
         warnings=study.warnings,
+        exact=exact_view(study, order),
     )
 
 
