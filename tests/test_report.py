@@ -84,6 +84,7 @@ def test_awkward_settings_and_texts_render_without_overlap(kind, case):
 def test_amounts_of_any_size_render_without_overlap(scale):
     book = report_builder.scaled(report_builder.ledger([1, 2, 6, 21], paths=400), scale)
     results, facts = study(book, report_builder.compiled([1, 2, 6, 21]), SETTINGS), report_builder.facts(book)
+    results = replace(results, exactness=report_builder.exactness(results))
     with report_style():
         pages = [faults(sheet.figure) for sheet in build(view_of(results, book), facts, created=CREATED)]
     assert [fault for page in pages for fault in page] == []
@@ -98,11 +99,10 @@ def test_long_schedule_names_render_without_overlap():
     )
     book = replace(report_builder.ledger([1, 2, 6, 21], paths=400), schedules=names)
     compiled = replace(report_builder.compiled([1, 2, 6, 21]), names=names)
+    results = study(book, compiled, SETTINGS)
+    results = replace(results, exactness=report_builder.exactness(results))
     with report_style():
-        pages = [
-            faults(s.figure)
-            for s in build(view_of(study(book, compiled, SETTINGS), book), report_builder.facts(book), created=CREATED)
-        ]
+        pages = [faults(s.figure) for s in build(view_of(results, book), report_builder.facts(book), created=CREATED)]
     assert [fault for page in pages for fault in page] == []
 
 
