@@ -137,6 +137,21 @@ def test_gain_of_exact_scaling_is_told_also_where_it_does_harm():
     assert "below 1 it does harm" in words
 
 
+def test_a_choice_as_good_as_the_optimum_is_called_so_and_another_by_its_distance():
+    done, sheets = exact_sheets("ten schedules")
+    curve, best = done.exactness.curve, done.choice.chosen
+    figures = done.exactness.agreement.figures
+    more = -figures.mean_costs[best] + SETTINGS.cost_of_risk * figures.std[best] - curve.objective[curve.best]
+    assert abs(more) > 0.01 * curve.objective[curve.best]
+    told = f"{money(abs(more), currency='EUR')} {'more' if more > 0 else 'less'}"
+    assert sheets["exact"].title.endswith(f"{done.schedules[best]}: {told}")
+    level = replace(curve, objective=curve.objective + more * (1.0 + 1e-6))
+    level = replace(done, exactness=replace(done.exactness, curve=level))
+    with report_style():
+        pages = build(view_of(level, made("ten schedules")[1].ledger), made("ten schedules")[1], created=CREATED)
+    assert next(s for s in pages if s.name == "exact").title.endswith(f"{done.schedules[best]} is as good")
+
+
 def test_a_reason_stands_in_the_place_of_exact_figures():
     reason = "the exact engine needs uncorrelated underlyings; simulate answers for correlated ones"
     _, sheets = exact_sheets("two underlyings", reason=reason)

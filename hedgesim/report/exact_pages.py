@@ -20,6 +20,8 @@ _ROW_MM, _LAW_ROW_MM, _BETWEEN_MM = 4.9, 4.6, 3.5
 # Heading, head of the table and three lines.
 _OPTIMA_MM = 28.0
 _SMALL, _NOTE = 9.0, 8.5
+# Objectives that agree to this fraction are told as equal: the curve itself is no closer.
+_AS_GOOD = 5e-4
 _GIVES = {"discretisation": "variance of discretisation", "floor": "variance of the floor", "cost": "mean cost"}
 
 
@@ -52,7 +54,7 @@ def exact(view: View, facts: RunFacts) -> list[Sheet]:
     if told.reason and told.figures is not None:
         y = sheet.text(left, y, f"No exact curve: {told.reason}.", width=_TABLE_MM) + 4.0
     if told.figures is not None:
-        below = _laws_height(view, told) + (_OPTIMA_MM + _BETWEEN_MM if told.sensitivities else 0.0)
+        below = _laws_height(told) + (_OPTIMA_MM + _BETWEEN_MM if told.sensitivities else 0.0)
         y = _differences(sheet, view, told.figures, left, y, BOTTOM_MM - below - _BETWEEN_MM) + _BETWEEN_MM
     if told.sensitivities:
         y = _optima(sheet, told, left, y, facts.currency) + _BETWEEN_MM
@@ -78,6 +80,8 @@ def _title(view: View, told: ExactView, currency: str) -> str:
     more = float(told.figures.objective[best]) - least
     if not view.varied or not math.isfinite(more):
         return title
+    if abs(more) <= _AS_GOOD * abs(least):
+        return f"{title}; {view.names[best]} is as good"
     size = money(abs(more), currency=currency)
     return f"{title}; {view.names[best]}: {size} {'more' if more >= 0.0 else 'less'}"
 
@@ -154,9 +158,9 @@ def _laws_shown(told: ExactView) -> list[Law]:
     return [law for law in told.laws if law.holds or math.isfinite(told.off[law.name])]
 
 
-def _laws_height(view: View, told: ExactView) -> float:
+def _laws_height(told: ExactView) -> float:
     """Millimetres that `_laws` takes."""
-    lines = sum(len(wrap(text, _TABLE_MM, _NOTE)) for text in _law_notes(view, told))
+    lines = sum(len(wrap(text, _TABLE_MM, _NOTE)) for text in _law_notes(told))
     table = line_height(style.CHART_TITLE) + line_height(_NOTE) + 3.4 + _LAW_ROW_MM * len(_laws_shown(told))
     return table + lines * line_height(_NOTE)
 
@@ -176,7 +180,7 @@ def _laws(sheet: Sheet, view: View, told: ExactView, left: float, top: float) ->
             Column("assumptions", ["met" if law.holds else "not met" for law in shown], "left"),
         ]
         y = sheet.table(left, y, _TABLE_MM, columns, size=_NOTE, row_height=_LAW_ROW_MM) + 1.2
-    for line in _law_notes(view, told):
+    for line in _law_notes(told):
         y = sheet.text(left, y, line, size=_NOTE, width=_TABLE_MM, colour=style.QUIET)
 
 
@@ -184,7 +188,7 @@ def _ratio(value: float) -> str:
     return f"{value:.3f}" if math.isfinite(value) else "n/a"
 
 
-def _law_notes(view: View, told: ExactView) -> list[str]:
+def _law_notes(told: ExactView) -> list[str]:
     """Which laws do not hold and why, where they come from, and what they assume."""
     shown = _laws_shown(told)
     lines = []
@@ -192,7 +196,7 @@ def _law_notes(view: View, told: ExactView) -> list[str]:
     if amiss:
         lines.append("Not met: " + "; ".join(f"{names} - {why}" for why, names in amiss.items()) + ".")
     if any(not math.isfinite(told.off[law.name]) for law in shown):
-        lines.append(f"n/a: nothing to compare with under {view.names[view.best]}, such as equal intervals.")
+        lines.append("n/a: no such variance or cost to compare with, or unequal intervals.")
     if shown:
         lines.append("Sources: " + "; ".join(f"{law.name}, {law.source}" for law in shown) + ".")
     assumed = _grouped([(a, law.name) for law in shown for a in law.assumptions])

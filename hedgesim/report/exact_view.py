@@ -124,7 +124,7 @@ def exact_view(study: Study, order: np.ndarray) -> ExactView | None:
 def gain_words(view: ExactView, names: tuple[str, ...], best: int) -> str:
     """What exact scaling is worth to the sampled tail, in one sentence; empty without exact figures."""
     if view.gain is None or view.gain_se is None:
-        return view.notes[0] if view.notes else ""
+        return f"{view.notes[0]}." if view.notes else ""
     rows = [
         f"{ratio:.2f} (\u00b1{error:.2f}) for {name.replace('es975', 'ES 97.5 %')}"
         for name, ratio, error in zip(SCALED_QUANTILES, view.gain[best], view.gain_se[best], strict=True)
