@@ -110,39 +110,49 @@ def _table(
     shape = reach.centre.shape
     start, cells = np.zeros(shape, dtype=np.int64), np.zeros(shape, dtype=np.int64)
     low, per_cell = np.zeros(shape), np.zeros(shape)
-    todo: list[tuple[int, int, Ints, Floats]] = []
-    filled = 0
-    for u in range(shape[0]):
-        mine = np.flatnonzero(book.underlying == u)
-        for look in looks:
-            live = mine[book.expiry_look[mine] > look]
-            if not len(live):
+    todo = [(u, int(look)) for u in range(shape[0]) for look in looks]
+    live: dict[tuple[int, int], tuple[Ints, Floats]] = {}
+
+    def measure(part: list[tuple[int, int]]) -> None:
+        for u, look in part:
+            j = np.flatnonzero((book.underlying == u) & (book.expiry_look > look))
+            if not len(j):
                 continue
-            root = vol[live] * np.sqrt(book.expiry_s[live] - grid.s[look])
-            bottom, top = _span(reach, u, int(look), t.log_strike[live], root)
-            width = _cell_width(np.abs(amount[live]), t.log_strike[live], root, tolerance)
+            root = vol[j] * np.sqrt(book.expiry_s[j] - grid.s[look])
+            bottom, top = _span(reach, u, look, t.log_strike[j], root)
+            width = _cell_width(np.abs(amount[j]), t.log_strike[j], root, tolerance)
             n = max(1, int(np.ceil((top - bottom) / width)))
-            start[u, look], cells[u, look], low[u, look], per_cell[u, look] = filled, n, bottom, n / (top - bottom)
-            todo.append((u, int(look), live, root))
-            filled += n
+            cells[u, look], low[u, look], per_cell[u, look] = n, bottom, n / (top - bottom)
+            live[u, look] = j, root
+
+    parts = [todo[k::threads] for k in range(threads)]
+    with ThreadPoolExecutor(threads) as pool:
+        list(pool.map(measure, parts))
+    filled = 0
+    for u, look in todo:
+        start[u, look] = filled
+        filled += int(cells[u, look])
     coefficients = _line_aligned(filled)
 
-    def fill(part: list[tuple[int, int, Ints, Floats]]) -> None:
-        for u, look, live, root in part:
+    def fill(part: list[tuple[int, int]]) -> None:
+        for u, look in part:
+            if (u, look) not in live:
+                continue
+            j, root = live[u, look]
             first = start[u, look]
             fill_cells(
                 low[u, look],
                 1.0 / per_cell[u, look],
-                amount[live],
-                t.log_strike[live],
+                amount[j],
+                t.log_strike[j],
                 root,
                 shift,
-                -float(amount[live][~book.is_call[live]].sum()),
+                -float(amount[j][~book.is_call[j]].sum()),
                 coefficients[first : first + cells[u, look]],
             )
 
     with ThreadPoolExecutor(threads) as pool:
-        list(pool.map(fill, [todo[k::threads] for k in range(threads)]))
+        list(pool.map(fill, parts))
     return Table(start, cells, low, per_cell, coefficients)
 
 

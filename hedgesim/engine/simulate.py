@@ -14,8 +14,7 @@ import numpy as np
 from hedgesim.book import Book, exposure, premium_received
 from hedgesim.costs import CostTerms
 from hedgesim.engine.ledger import COST_COMPONENTS, Ledger, Moments, Replicates, Watch
-from hedgesim.kernels.accounts import Accounts, close_accounts
-from hedgesim.kernels.moments import comoments
+from hedgesim.kernels.accounts import Accounts, close_chunk
 from hedgesim.kernels.replay import SMALLEST_TRADE
 from hedgesim.kernels.simulate import (
     DAY_ROWS,
@@ -300,18 +299,9 @@ def _run(setup: Setup, seed: int, begin: int, end: int, detail: bool) -> _Chunk:
     )
     totals, trades, turnover = np.empty((schedules, n)), np.empty((schedules, n)), np.empty((schedules, n))
     mean, products = np.empty((schedules, width)), np.empty((schedules, width, width))
-    columns = np.empty((width, n))
+    kept = np.empty((schedules if detail else 0, width, n))
     by_schedule = np.tile([name in _BY_SCHEDULE for name in COMPONENTS], underlyings)
-    everything = np.ones(width, dtype=bool)
-    kept = np.empty((schedules, underlyings, len(COMPONENTS), n)) if detail else None
-    for s in range(schedules):
-        close_accounts(path_rows, trade_rows[s], setup.accounts, s, columns, totals[s], trades[s], turnover[s])
-        if s > 0:
-            # What the path alone decides is the same under every schedule.
-            mean[s], products[s] = mean[0], products[0]
-        comoments(columns, setup.accounts.moving, by_schedule if s > 0 else everything, mean[s], products[s])
-        if kept is not None:
-            kept[s] = columns.reshape(kept.shape[1:])
+    close_chunk(path_rows, trade_rows, setup.accounts, by_schedule, totals, trades, turnover, mean, products, kept)
     return _Chunk(
         paths=n,
         totals=totals,
@@ -322,7 +312,7 @@ def _run(setup: Setup, seed: int, begin: int, end: int, detail: bool) -> _Chunk:
         residual_bins=bins,
         residual_sum=residual_sum,
         days=days,
-        detail=None if kept is None else (kept, trades, turnover),
+        detail=(kept.reshape(schedules, underlyings, -1, n), trades, turnover) if detail else None,
     )
 
 

@@ -6,6 +6,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from hedgesim.kernels.jit import kernel
+from hedgesim.kernels.moments import comoments
 
 Floats = NDArray[np.float64]
 
@@ -78,3 +79,35 @@ def close_accounts(
         for p in range(n):
             trades[p] += looks - trade[3, p]
             turnover[p] += trade[1, p]
+
+
+@kernel
+def close_chunk(
+    path_rows: Floats,
+    trade_rows: Floats,
+    accounts: Accounts,
+    by_schedule: NDArray[np.bool_],
+    totals: Floats,
+    trades: Floats,
+    turnover: Floats,
+    mean: Floats,
+    products: Floats,
+    kept: Floats,
+) -> None:
+    """Totals and moments of every schedule, with the arguments of `close_accounts` and `comoments` by schedule.
+
+    `by_schedule` marks the columns that differ between schedules; `kept` (schedule, column, path) takes every
+    component of every path when it has room for any.
+    """
+    columns = np.empty((mean.shape[1], path_rows.shape[2]))
+    fresh = np.ones(len(by_schedule), dtype=np.bool_)
+    for s in range(trade_rows.shape[0]):
+        close_accounts(path_rows, trade_rows[s], accounts, s, columns, totals[s], trades[s], turnover[s])
+        if s > 0:
+            # What the path alone decides is the same under every schedule.
+            mean[s] = mean[0]
+            products[s] = products[0]
+            fresh[:] = by_schedule
+        comoments(columns, accounts.moving, fresh, mean[s], products[s])
+        if kept.shape[0] > 0:
+            kept[s] = columns

@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 
 from hedgesim.kernels.jit import device, kernel
 from hedgesim.kernels.rows import LANES, quintic_of_eight
-from hedgesim.kernels.vector_math import normal_cdf, normal_pdf
+from hedgesim.kernels.vector_math import normal_cdf_and_pdf
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
@@ -67,8 +67,9 @@ def fill_cells(
         a = amount[j]
         for i in range(cells + 1):
             d = first + i * step
-            density = a * inv * normal_pdf(min(max(d, -37.0), 37.0))
-            value[i] += a * normal_cdf(d)
+            below, bell = normal_cdf_and_pdf(d)
+            density = a * inv * bell
+            value[i] += a * below
             slope[i] += density
             bend[i] -= density * d * inv
     for i in range(cells):
