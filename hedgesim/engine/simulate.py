@@ -4,7 +4,9 @@ Paths are worked off in chunks whose size depends on the path count alone, and c
 ledger is the same to the last bit for any number of threads and any block size.
 """
 
+import math
 import os
+import threading
 from collections.abc import Callable, Iterator
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass
@@ -272,12 +274,25 @@ def _in_order(
         pool.shutdown(wait=True, cancel_futures=True)
 
 
+_own = threading.local()
+
+
+def _scratch(name: str, shape: tuple[int, ...]) -> Floats:
+    """Room that a worker thread uses again for each of its chunks: fresh memory costs page faults every time."""
+    size = math.prod(shape)
+    space: Floats | None = getattr(_own, name, None)
+    if space is None or len(space) < size:
+        space = np.empty(size)
+        setattr(_own, name, space)
+    return space[:size].reshape(shape)
+
+
 def _run(setup: Setup, seed: int, begin: int, end: int, detail: bool) -> _Chunk:
     n = end - begin
     schedules, underlyings = setup.hedging.schedules, len(setup.accounts.premium_cash)
     width = underlyings * len(COMPONENTS)
-    path_rows = np.empty((underlyings, len(PATH_ROWS), n))
-    trade_rows = np.empty((schedules, underlyings, len(TRADE_ROWS), n))
+    path_rows = _scratch("path", (underlyings, len(PATH_ROWS), n))
+    trade_rows = _scratch("trade", (schedules, underlyings, len(TRADE_ROWS), n))
     watch = begin < WATCHED_PATHS
     bins = np.zeros((schedules, RESIDUAL_BINS) if watch else (schedules, 0), dtype=np.int64)
     residual_sum = np.zeros(schedules)
