@@ -136,8 +136,11 @@ def gain_words(view: ExactView, names: tuple[str, ...], best: int) -> str:
     low, high = float(known.min()), float(known.max())
     if high <= 1.0:
         verdict = "it helps nowhere"
+    elif low < 1.0:
+        verdict = "below 1 it does harm"
     else:
-        verdict = "below 1 it does harm" if low < 1.0 else "it helps everywhere"
+        sure = bool(np.nanmin(view.gain - 2.0 * view.gain_se) > 1.0)
+        verdict = "it helps everywhere" if sure else "within two errors of 1 the gain is not certain"
     return (
         f"Shifting and scaling the simulated totals to their exact mean and std multiplies the effective paths under "
         f"{names[best]} by {', '.join(rows)}, and by {low:.2f} to {high:.2f} over all schedules and these figures "
